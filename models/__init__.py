@@ -1,0 +1,1 @@
+"""What the parts and the circuit do: no audio, no screen, no files beyond TOML and CSV."""

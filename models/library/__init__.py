@@ -1,0 +1,1 @@
+"""Shipped data: circuits (``circuit_*.toml``) and part types (``types.toml``)."""

@@ -1,0 +1,1 @@
+"""How it sounds, and what people touch: engine, audio files, takes, commands."""

@@ -1,0 +1,2 @@
+"""One file per command."""
+def main(argv=None): return 0

@@ -1,0 +1,1 @@
+"""Shipped riffs, example tray and fixture; all invented, see the seeded scripts beside them."""
