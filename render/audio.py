@@ -210,6 +210,11 @@ class AudioReader:
                     f"file holds {held} ({self.frames} frames); export or copy the file again"
                 )
                 break
+        if self._file.format == "OGG" and not _ogg_is_whole(self.path):
+            faults.append(
+                f"{self.path}: cut short: its last page is missing ({self.frames} frames are "
+                "left); export or copy the file again"
+            )
         if self.frames <= 0 and not faults:
             faults.append(
                 f"{self.path}: holds no audio (0 frames); if a recorder wrote it, the recording "
@@ -612,6 +617,18 @@ def _reason(fault: Exception) -> str:
     if isinstance(fault, OSError) and fault.strerror:
         return fault.strerror
     return str(fault) or "not all frames were taken"
+
+
+def _ogg_is_whole(path: Path) -> bool:
+    """Return whether the last page carries the end-of-stream flag (RFC 3533, section 6)."""
+    with path.open("rb") as stream:
+        stream.seek(max(0, path.stat().st_size - 66_000))  # a page has at most 65,307 bytes
+        tail = stream.read()
+    page = tail[tail.rfind(b"OggS") :]
+    if len(page) < 27 or not page[5] & 4:
+        return False
+    segments = page[26]
+    return len(page) >= 27 + segments + sum(page[27 : 27 + segments])
 
 
 def _file_faults(file: Path, inputs: Iterable[str | Path], overwrite: bool) -> list[str]:
