@@ -1,0 +1,429 @@
+"""The sample loops of the nonlinear chain.
+
+``lane_kernel`` builds the fast loop: stages and lanes are compile-time constants,
+lanes (takes, channels or time slices) lie innermost so that the compiler runs
+several in one instruction. Each sample takes one or two Newton passes over all
+stages at once, from a start extrapolated through the last four samples: every stage's slope first, which makes each stage an affine map of its input;
+the maps are composed, the feedback loop is closed with one division, and the
+voltages are substituted back. ``careful_kernel`` is the scalar loop for what that
+cannot hold: op-amp outputs at their rails and steps that need more passes.
+
+All working memory of the fast loop is one flat array with compile-time offsets:
+with several arrays the compiler would have to test them for overlap at each loop.
+
+Per stage the companion equation is ``v + w0 G(v) + history = x`` with
+``G(v) = (h/C)(i(v) + v/Rp + ...)`` and ``history = q1 + w1 G1 + w2 G2 + w3 G3``,
+where ``q = x - v`` is the capacitor's voltage and ``w0..w3`` are the weights of the
+integration rule, stage by stage.
+
+Arguments common to both (S stages, L lanes):
+
+x : (frames, L) stage-1 input [V]
+gate : (frames, L) gate bus [V]
+out : (frames, L) last stage's output [V]
+lane : (5, S, L) per part: VC, h beta/C, lambda, w, 1/w
+stage : (9, S) per stage: h/(C Rp) with other loads, a, b, c, w0, w1, w2, w3, h/(C Rnet)
+state : (8, S, L) q1, G1, G2, G3, v1..v4; carried from call to call
+first : frames before this one only warm the state up: not written, not counted
+tally : counts and extremes, see the constants below
+"""
+
+from __future__ import annotations
+
+from functools import cache
+from typing import Any
+
+import numpy as np
+
+from ..models.jit import kernel
+from .law_kernels import positive, second
+
+# Rows of `lane`
+VC, HBETA, LAMBDA, KNEE, PER_KNEE = range(5)
+# Rows of `stage`
+HSHUNT, A, B, C, W0, W1, W2, W3, HNET = range(9)
+# Rows of `state`
+Q1, G1, G2, G3, V1, V2, V3, V4 = range(8)
+STATES = 8
+# Columns of `tally`, one row per lane
+GATE_SOURCE, GATE_DRAIN, LOW_INPUT, HIGH_INPUT, TOP, CHANGE, RAIL, STUCK = range(8)
+TALLIES = 8
+# Junctions and plus inputs are looked at on every so many steps, and counted as often.
+COUNT_EVERY = 4
+
+
+@cache
+def lane_kernel(
+    stages: int, lanes: int, soft: bool, bent: bool, half_drain: bool, frm: int, passes: int
+) -> tuple[Any, int]:
+    """Return the compiled fast loop and the length of its ``work``.
+
+    Parameters
+    ----------
+    stages, lanes : int
+        Compile-time sizes.
+    soft, bent, half_drain : bool
+        Whether the law has a knee, has lambda, and whether the half-drain network is there.
+    frm : int
+        The stage that feeds back, from 0; -1 for none.
+    passes : int
+        Newton passes per sample, 1 or 2.
+
+    Notes
+    -----
+    ``tally[:, TOP]`` receives the highest output magnitude and ``tally[:, CHANGE]`` the
+    largest correction of the last pass. What a pass leaves behind goes as the square of
+    its correction, so the caller can judge by them whether a lane must be done again.
+    """
+    S, L = stages, lanes
+    SL = S * L
+    # Offsets into the flat working memory: the state's rows come first, in their order.
+    OQ, OG1, OG2, OG3, OV1, OV2, OV3, OV4 = (i * SL for i in range(STATES))
+    OHIST, OU, OSRC, OV, OD, OALPHA, OP, OQQ, OBEND = (i * SL for i in range(STATES, STATES + 9))
+    OVC, OHB, OLAM, OW, OPW = (i * SL for i in range(STATES + 9, STATES + 14))
+    OX = (STATES + 14) * SL  # per lane: composed constant
+    OY = OX + L  # per lane: composed factor of the fed-back output
+    OF = OY + L  # per lane: fed-back output
+    OCH = OF + L
+    OTOP = OCH + L
+    OGS, OGD, OLO, OHI = (OTOP + (i + 1) * L for i in range(4))
+    SIZE = OHI + L
+    feedback = frm >= 0
+
+    @kernel(boundscheck=False)
+    def run(x, gate, out, lane, stage, state, first, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
+        for s in range(S):
+            for l in range(L):
+                i = s * L + l
+                for k in range(STATES):
+                    work[k * SL + i] = state[k, s, l]
+                for k in range(5):
+                    work[OVC + k * SL + i] = lane[k, s, l]
+        for i in range(OCH, SIZE):
+            work[i] = 0.0
+        for n in range(x.shape[0]):
+            if n == first:
+                for i in range(OCH, SIZE):
+                    work[i] = 0.0
+            # What the gate and the past settle: overdrive, source side, history, start.
+            for s in range(S):
+                w1, w2, w3 = stage[W1, s], stage[W2, s], stage[W3, s]
+                for l in range(L):
+                    i = s * L + l
+                    u = keep * gate[n, l] - work[OVC + i]
+                    work[OU + i] = u
+                    if not half_drain:
+                        p, _ = positive(u, work[OW + i], work[OPW + i], soft)
+                        work[OSRC + i] = p * p
+                    past = w1 * work[OG1 + i] + w2 * work[OG2 + i] + w3 * work[OG3 + i]
+                    work[OHIST + i] = work[OQ + i] + past
+                    work[OV + i] = (
+                        4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
+                    )
+            for turn in range(passes):
+                for l in range(L):
+                    work[OX + l] = x[n, l]
+                    work[OY + l] = 0.0
+                # Every stage as an affine map of its input, composed along the chain.
+                for s in range(S):
+                    hs, hn = stage[HSHUNT, s], stage[HNET, s]
+                    a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
+                    for l in range(L):
+                        i = s * L + l
+                        v = work[OV + i]
+                        u = work[OU + i]
+                        w, pw = work[OW + i], work[OPW + i]
+                        hb = work[OHB + i]
+                        pd, sd = positive(u - keep * v, w, pw, soft)
+                        if half_drain:
+                            ps, ss = positive(u + (1.0 - keep) * v, w, pw, soft)
+                            square = ps * ps - pd * pd
+                            slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
+                            bend = (1.0 - keep) * (1.0 - keep) * second(ps, ss, pw, soft)
+                            bend -= keep * keep * second(pd, sd, pw, soft)
+                        else:
+                            square = work[OSRC + i] - pd * pd
+                            slope = 2.0 * pd * sd
+                            bend = -second(pd, sd, pw, soft)
+                        if bent:
+                            lam = work[OLAM + i]
+                            lin = 1.0 + lam * abs(v)
+                            slope = lin * slope + (lam if v >= 0.0 else -lam) * square
+                            square = lin * square
+                        g = hb * square + hs * v
+                        dg = hb * slope + hs
+                        if half_drain:
+                            g += hn * (v - gate[n, l])
+                            dg += hn
+                        d = 1.0 / (1.0 + w0 * dg)
+                        alpha = v - d * (v + w0 * g + work[OHIST + i])
+                        work[OD + i] = d
+                        work[OALPHA + i] = alpha
+                        work[OBEND + i] = hb * bend
+                        px = work[OX + l]
+                        work[OP + i] = px
+                        gain = a * d - b
+                        work[OX + l] = gain * px + a * alpha
+                        if feedback:
+                            qx = work[OY + l]
+                            work[OQQ + i] = qx
+                            work[OY + l] = gain * qx - c
+                    if s == frm:
+                        for l in range(L):
+                            work[OF + l] = work[OX + l] / (1.0 - work[OY + l])
+                if feedback:
+                    for l in range(L):
+                        work[OX + l] += work[OY + l] * work[OF + l]
+                last = turn == passes - 1
+                # Back into the stages; after the last pass the state moves on.
+                for s in range(S):
+                    w0 = stage[W0, s]
+                    per_w0 = 1.0 / w0
+                    for l in range(L):
+                        i = s * L + l
+                        xs = work[OP + i]
+                        if feedback:
+                            xs += work[OQQ + i] * work[OF + l]
+                        v = work[OD + i] * xs + work[OALPHA + i]
+                        if last:
+                            move = v - work[OV + i]
+                            work[OCH + l] = max(work[OCH + l], abs(move))
+                            if s > 0:
+                                work[OTOP + l] = max(work[OTOP + l], abs(xs))
+                            # The charge follows the law to second order about the start;
+                            # what the pass left out there always has one sign and would add up.
+                            g = (xs - v - work[OHIST + i]) * per_w0 + work[OBEND + i] * move * move
+                            work[OG3 + i] = work[OG2 + i]
+                            work[OG2 + i] = work[OG1 + i]
+                            work[OG1 + i] = g
+                            work[OQ + i] = work[OHIST + i] + w0 * g
+                            work[OV4 + i] = work[OV3 + i]
+                            work[OV3 + i] = work[OV2 + i]
+                            work[OV2 + i] = work[OV1 + i]
+                            work[OV1 + i] = v
+                        else:
+                            work[OV + i] = v
+            for l in range(L):
+                work[OTOP + l] = max(work[OTOP + l], abs(work[OX + l]))
+            if n >= first:
+                for l in range(L):
+                    out[n, l] = work[OX + l]
+            if n % COUNT_EVERY == 0:
+                for s in range(S):
+                    for l in range(L):
+                        v = work[OV1 + s * L + l]
+                        own = keep * gate[n, l] + (1.0 - keep) * v
+                        work[OGS + l] += 1.0 if own > conduct else 0.0
+                        work[OGD + l] += 1.0 if own - v > conduct else 0.0
+                        work[OLO + l] += 1.0 if v < low else 0.0
+                        work[OHI + l] += 1.0 if v > high else 0.0
+        for s in range(S):
+            for l in range(L):
+                i = s * L + l
+                for k in range(STATES):
+                    state[k, s, l] = work[k * SL + i]
+        for l in range(L):
+            tally[l, GATE_SOURCE] += COUNT_EVERY * work[OGS + l]
+            tally[l, GATE_DRAIN] += COUNT_EVERY * work[OGD + l]
+            tally[l, LOW_INPUT] += COUNT_EVERY * work[OLO + l]
+            tally[l, HIGH_INPUT] += COUNT_EVERY * work[OHI + l]
+            tally[l, TOP] = work[OTOP + l]
+            tally[l, CHANGE] = work[OCH + l]
+
+    return run, SIZE
+
+
+@kernel(boundscheck=False)
+def chain(start, fed, d, alpha, stage, S, frm, rail_low, rail_high, v, xs, ys):  # type: ignore[no-untyped-def]
+    """Walk the linearised chain with clamped outputs; return the feeding stage's output."""
+    x = start
+    back = 0.0
+    for s in range(S):
+        xs[s] = x
+        v[s] = d[s] * x + alpha[s]
+        y = stage[A, s] * v[s] - stage[B, s] * x - stage[C, s] * fed
+        y = min(max(y, rail_low), rail_high)
+        ys[s] = y
+        if s == frm:
+            back = y
+        x = y
+    return back
+
+
+@cache
+def careful_kernel(soft: bool, half_drain: bool) -> Any:
+    """Return the compiled scalar loop: rails obeyed, every step taken to convergence.
+
+    It works on one lane of the same arrays. Each Newton pass linearises the
+    stages, then finds the fed-back output with the rails in force: the chain's
+    output is a bounded, piecewise linear function of it, so a fixed point lies
+    between the rails and bisection finds it. ``tally[RAIL]`` counts samples with an
+    output at a rail, ``tally[STUCK]`` samples whose passes did not settle.
+    """
+    most_passes = 40
+    settled_v = 1e-11
+
+    @kernel(boundscheck=False)
+    def run(
+        x,
+        gate,
+        out,
+        lane,
+        stage,
+        state,
+        first,
+        conduct,
+        low,
+        high,
+        keep,
+        l,
+        frm,
+        rail_low,
+        rail_high,
+        tally,
+    ):  # type: ignore[no-untyped-def]
+        S = stage.shape[1]
+        hist, v, d, alpha, new, xs, ys = (
+            np.zeros(S),
+            np.zeros(S),
+            np.zeros(S),
+            np.zeros(S),
+            np.zeros(S),
+            np.zeros(S),
+            np.zeros(S),
+        )
+        fed = 0.0
+        for n in range(x.shape[0]):
+            bus = gate[n, l]
+            for s in range(S):
+                hist[s] = (
+                    state[Q1, s, l]
+                    + stage[W1, s] * state[G1, s, l]
+                    + stage[W2, s] * state[G2, s, l]
+                    + stage[W3, s] * state[G3, s, l]
+                )
+                v[s] = (
+                    4.0 * (state[V1, s, l] + state[V3, s, l])
+                    - 6.0 * state[V2, s, l]
+                    - state[V4, s, l]
+                )
+            done = False
+            for turn in range(most_passes):
+                for s in range(S):
+                    u = keep * bus - lane[VC, s, l]
+                    lam, w, pw = lane[LAMBDA, s, l], lane[KNEE, s, l], lane[PER_KNEE, s, l]
+                    pd, sd = positive(u - keep * v[s], w, pw, soft)
+                    ps, ss = positive(u + (1.0 - keep) * v[s], w, pw, soft)
+                    lin = 1.0 + lam * abs(v[s])
+                    square = ps * ps - pd * pd
+                    slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
+                    hb = lane[HBETA, s, l]
+                    g = hb * lin * square + stage[HSHUNT, s] * v[s]
+                    dg = hb * lin * slope + stage[HSHUNT, s]
+                    if half_drain:
+                        g += stage[HNET, s] * (v[s] - bus)
+                        dg += stage[HNET, s]
+                    dg += hb * (lam if v[s] >= 0.0 else -lam) * square
+                    d[s] = 1.0 / (1.0 + stage[W0, s] * dg)
+                    alpha[s] = v[s] - d[s] * (v[s] + stage[W0, s] * g + hist[s])
+                if frm >= 0:
+                    a0, b0 = rail_low, rail_high
+                    miss = (
+                        chain(
+                            x[n, l], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
+                        )
+                        - fed
+                    )
+                    # The chain is affine where nothing clips: one secant step then lands on it.
+                    probe = fed + 1e-3
+                    step = (
+                        chain(
+                            x[n, l],
+                            probe,
+                            d,
+                            alpha,
+                            stage,
+                            S,
+                            frm,
+                            rail_low,
+                            rail_high,
+                            new,
+                            xs,
+                            ys,
+                        )
+                        - probe
+                    )
+                    if step != miss:
+                        fed = fed - miss * 1e-3 / (step - miss)
+                    fed = min(max(fed, rail_low), rail_high)
+                    miss = (
+                        chain(
+                            x[n, l], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
+                        )
+                        - fed
+                    )
+                    if abs(miss) > 1e-13:
+                        for _ in range(80):
+                            fed = 0.5 * (a0 + b0)
+                            miss = (
+                                chain(
+                                    x[n, l],
+                                    fed,
+                                    d,
+                                    alpha,
+                                    stage,
+                                    S,
+                                    frm,
+                                    rail_low,
+                                    rail_high,
+                                    new,
+                                    xs,
+                                    ys,
+                                )
+                                - fed
+                            )
+                            if miss > 0.0:
+                                a0 = fed
+                            else:
+                                b0 = fed
+                            if abs(miss) < 1e-15 or b0 - a0 < 1e-15:
+                                break
+                else:
+                    chain(x[n, l], 0.0, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys)
+                change = 0.0
+                for s in range(S):
+                    move = new[s] - v[s]
+                    change = max(change, abs(move))
+                    # After many passes a cycle between two kinks is likely: take half steps.
+                    v[s] += move if turn < 12 else 0.5 * move
+                if change < settled_v:
+                    done = True
+                    break
+            if n == first:
+                for k in range(TALLIES):
+                    tally[l, k] = 0.0
+            clipped = False
+            for s in range(S):
+                if ys[s] <= rail_low or ys[s] >= rail_high:
+                    clipped = True
+                q = xs[s] - v[s]
+                state[G3, s, l] = state[G2, s, l]
+                state[G2, s, l] = state[G1, s, l]
+                state[G1, s, l] = (q - hist[s]) / stage[W0, s]
+                state[Q1, s, l] = q
+                state[V4, s, l] = state[V3, s, l]
+                state[V3, s, l] = state[V2, s, l]
+                state[V2, s, l] = state[V1, s, l]
+                state[V1, s, l] = v[s]
+                if n % COUNT_EVERY == 0:
+                    own = keep * bus + (1.0 - keep) * v[s]
+                    tally[l, GATE_SOURCE] += COUNT_EVERY if own > conduct else 0.0
+                    tally[l, GATE_DRAIN] += COUNT_EVERY if own - v[s] > conduct else 0.0
+                    tally[l, LOW_INPUT] += COUNT_EVERY if v[s] < low else 0.0
+                    tally[l, HIGH_INPUT] += COUNT_EVERY if v[s] > high else 0.0
+            tally[l, RAIL] += 1.0 if clipped else 0.0
+            tally[l, STUCK] += 0.0 if done else 1.0
+            if n >= first:
+                out[n, l] = ys[S - 1]
+
+    return run

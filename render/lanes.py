@@ -1,0 +1,228 @@
+"""Filling the sample loops' tables and running them over lanes.
+
+One call runs a bundle of lanes through the nonlinear chain: first the fast loop,
+then, for lanes whose outputs came to a rail or whose steps needed more passes,
+the careful loop over the same input.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from ..models.circuit import Circuit
+from ..models.jfet import Jfet
+from .chain_kernels import (
+    CHANGE,
+    HBETA,
+    KNEE,
+    LAMBDA,
+    PER_KNEE,
+    STATES,
+    TALLIES,
+    TOP,
+    VC,
+    careful_kernel,
+    lane_kernel,
+)
+from .rules import Rule, weight_table
+
+Array = npt.NDArray[np.float64]
+
+# A junction is taken to conduct audibly above this forward voltage; silicon passes
+# about a microampere there (design rule of the trade, no published source).
+CONDUCTING_V = 0.5
+# The voltage error that the Newton passes may leave behind: -114 dB re 0.5 V.
+LEFT_OVER_V = 1e-6
+
+
+@dataclass(frozen=True)
+class Tally:
+    """What the loops counted, summed over lanes; counts are of stages times steps.
+
+    Parameters
+    ----------
+    gate_source, gate_drain : float
+        Steps with a gate junction forward to the source, to the drain.
+    low_input, high_input : float
+        Steps with a plus input outside the op amps' common-mode range.
+    rail : float
+        Steps with any stage's output at a rail.
+    stuck : float
+        Steps whose Newton passes did not settle.
+    careful_steps : float
+        Steps done by the careful loop.
+    """
+
+    gate_source: float = 0.0
+    gate_drain: float = 0.0
+    low_input: float = 0.0
+    high_input: float = 0.0
+    rail: float = 0.0
+    stuck: float = 0.0
+    careful_steps: float = 0.0
+
+    def __add__(self, other: Tally) -> Tally:
+        """Return the sum of two tallies."""
+        return Tally(*(a + b for a, b in zip(self._row(), other._row(), strict=True)))
+
+    def _row(self) -> tuple[float, ...]:
+        return (
+            self.gate_source,
+            self.gate_drain,
+            self.low_input,
+            self.high_input,
+            self.rail,
+            self.stuck,
+            self.careful_steps,
+        )
+
+
+class LaneRunner:
+    """The chain of one circuit, ready to run lanes at one step.
+
+    Parameters
+    ----------
+    circuit : Circuit
+        The schematic.
+    sets : sequence of sequence of Jfet
+        One set per lane, or a single set for all lanes; parts as they are at the
+        channel temperature. All knees are zero or none is.
+    step_s : float
+        Step of the integration [s].
+    rules : tuple of Rule
+        One per stage.
+    lanes : int
+        Number of lanes.
+    """
+
+    def __init__(
+        self,
+        circuit: Circuit,
+        sets: Sequence[Sequence[Jfet]],
+        step_s: float,
+        rules: tuple[Rule, ...],
+        lanes: int,
+    ) -> None:
+        count = circuit.stage_count
+        self.lanes = lanes
+        self.stages = count
+        knees = [part.knee_v for parts in sets for part in parts]
+        self.soft = max(knees) > 0.0
+        capacitors = np.array([stage.capacitor_f for stage in circuit.stages])
+        self.lane_table = np.zeros((5, count, lanes))
+        for lane in range(lanes):
+            parts = sets[lane % len(sets)]
+            for s, part in enumerate(parts):
+                # A knee of zero among soft ones becomes 1 nV: the same law to the last bit heard.
+                knee = max(part.knee_v, 1e-9) if self.soft else 1.0
+                self.lane_table[VC, s, lane] = part.cutoff_v
+                self.lane_table[HBETA, s, lane] = step_s * part.beta_a_per_v2 / capacitors[s]
+                self.lane_table[LAMBDA, s, lane] = part.lambda_per_v
+                self.lane_table[KNEE, s, lane] = knee
+                self.lane_table[PER_KNEE, s, lane] = 1.0 / knee
+        net = net_conductance_s(circuit)
+        shunts = np.array([1.0 / stage.shunt_ohm for stage in circuit.stages])
+        gains = np.array([circuit.arm_gains(s) for s in range(count)]).T
+        self.stage_table = np.vstack(
+            [
+                step_s * shunts[None] / capacitors,
+                gains,
+                weight_table(rules),
+                np.full((1, count), step_s * net) / capacitors,
+            ]
+        )
+        self.keep = 1.0 - circuit.half_drain_share
+        self.half_drain = circuit.bus.half_drain is not None
+        loop = circuit.feedback
+        self.frm = -1 if loop is None else loop.from_stage - 1
+        self.rails = circuit.rails_v
+        self.common_mode = circuit.common_mode_v
+        curvature = (weight_table(rules)[0] * self.lane_table[HBETA].max(axis=1)).max()
+        self.change_limit_v = float(np.sqrt(LEFT_OVER_V / curvature))
+        bent = bool(self.lane_table[LAMBDA].any())
+        self._fast = [
+            lane_kernel(count, lanes, self.soft, bent, self.half_drain, self.frm, passes)
+            for passes in (1, 2)
+        ]
+
+    def run(self, x: Array, gate: Array, first: int) -> tuple[Array, Tally]:
+        """Run all lanes from rest.
+
+        Parameters
+        ----------
+        x : ndarray
+            First stage's input, shape (frames, lanes), C order [V].
+        gate : ndarray
+            Gate bus, shape (frames, lanes), C order [V].
+        first : int
+            Frames before this one warm the chain up and are not written.
+
+        Returns
+        -------
+        out : ndarray
+            Last stage's output, shape (frames - first, lanes) [V].
+        tally : Tally
+            What was counted from frame `first` on.
+        """
+        out, tally = self._pass(x, gate, first, passes=1)
+        again = self._unfit(tally)
+        if len(again):
+            # Lanes are independent: what one lane gets does not depend on its neighbours.
+            better, counted = self._pass(x, gate, first, passes=2)
+            out[:, again] = better[:, again]
+            tally[again] = counted[again]
+            again = again[np.isin(again, self._unfit(counted))]
+        tally[:, TOP] = tally[:, CHANGE] = 0.0
+        if len(again):
+            self._carefully(again, x, gate, first, out, tally)
+        total = tally.sum(axis=0)
+        steps = float(len(again) * (len(x) - first))
+        return out[first:], Tally(*total[:4], *total[6:8], steps)
+
+    def _pass(self, x: Array, gate: Array, first: int, passes: int) -> tuple[Array, Array]:
+        """Run the fast loop over all lanes."""
+        run, size = self._fast[passes - 1]
+        out = np.zeros_like(x)
+        tally = np.zeros((self.lanes, TALLIES))
+        state = np.zeros((STATES, self.stages, self.lanes))
+        run(
+            x, gate, out, self.lane_table, self.stage_table, state, first,
+            CONDUCTING_V, *self.common_mode, self.keep, np.zeros(size), tally,
+        )  # fmt: skip
+        return out, tally
+
+    def _unfit(self, tally: Array) -> npt.NDArray[np.intp]:
+        """Return the lanes that came to a rail or whose last pass corrected too much."""
+        limit = min(abs(rail) for rail in self.rails)
+        fit = (tally[:, TOP] < limit) & (tally[:, CHANGE] < self.change_limit_v)
+        return np.flatnonzero(~fit)
+
+    def _carefully(
+        self,
+        chosen: npt.NDArray[np.intp],
+        x: Array,
+        gate: Array,
+        first: int,
+        out: Array,
+        tally: Array,
+    ) -> None:
+        """Do the chosen lanes again with the careful loop."""
+        careful = careful_kernel(self.soft, self.half_drain)
+        state = np.zeros((STATES, self.stages, self.lanes))
+        tally[chosen] = 0.0
+        for lane in chosen:
+            careful(
+                x, gate, out, self.lane_table, self.stage_table, state, first,
+                CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
+                *self.rails, tally,
+            )  # fmt: skip
+
+
+def net_conductance_s(circuit: Circuit) -> float:
+    """Conductance from each drain to the gate bus through the half-drain network [S]."""
+    network = circuit.bus.half_drain
+    return 0.0 if network is None else 1.0 / (network.from_bus_ohm + network.from_drain_ohm)
