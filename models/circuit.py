@@ -16,55 +16,28 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, model_validator
+from pydantic import Field, ValidationError, model_validator
 
 from .errors import InputError, near_names
-from .quantity import format_quantity, parse_quantity
+from .schema import Part, explain_faults, read_toml, within
 
 MIN_STAGES = 2
 MAX_STAGES = 12
-MAX_FILE_BYTES = 1_000_000
+
+Ohms = Annotated[float, within("ohm", 1.0, 100e6, "4k7")]
+EndOhms = Annotated[float, within("ohm", 0.0, 100e6, "4k7")]
+Farads = Annotated[float, within("F", 10e-12, 10e-3, "39n")]
+StageFarads = Annotated[float, within("F", 100e-12, 10e-6, "39n")]
+SupplyVolts = Annotated[float, within("V", 3.0, 60.0, "9 V")]
+RailVolts = Annotated[float, within("V", 0.0, 60.0, "5.1 V")]
+SignedVolts = Annotated[float, within("V", -60.0, 60.0, "-1.2 V")]
+HeadroomVolts = Annotated[float, within("V", 0.0, 10.0, "1.5 V")]
+Hertz = Annotated[float, within("Hz", 0.001, 100.0, "0.8 Hz")]
+Fraction = Annotated[float, within("%", 0.01, 0.99, "10 %")]
+Degrees = Annotated[float, within("deg", 30.0, 360.0, "270 deg")]
 
 
-def _within(unit: str, low: float, high: float, example: str) -> BeforeValidator:
-    """Return a validator reading a written quantity of `unit` between two limits."""
-
-    def read(written: object) -> float:
-        if isinstance(written, bool) or not isinstance(written, str | int | float):
-            raise ValueError(f"expected a value such as {example!r}, got {written!r}")
-        value = parse_quantity(written, unit)
-        if not low <= value <= high:
-            raise ValueError(
-                f"{format_quantity(value, unit)} is outside {format_quantity(low, unit)} to "
-                f"{format_quantity(high, unit)}; write it as on the schematic, for example {example!r}"
-            )
-        return value
-
-    return BeforeValidator(read)
-
-
-Ohms = Annotated[float, _within("ohm", 1.0, 100e6, "4k7")]
-EndOhms = Annotated[float, _within("ohm", 0.0, 100e6, "4k7")]
-Farads = Annotated[float, _within("F", 10e-12, 10e-3, "39n")]
-StageFarads = Annotated[float, _within("F", 100e-12, 10e-6, "39n")]
-SupplyVolts = Annotated[float, _within("V", 3.0, 60.0, "9 V")]
-RailVolts = Annotated[float, _within("V", 0.0, 60.0, "5.1 V")]
-SignedVolts = Annotated[float, _within("V", -60.0, 60.0, "-1.2 V")]
-HeadroomVolts = Annotated[float, _within("V", 0.0, 10.0, "1.5 V")]
-Hertz = Annotated[float, _within("Hz", 0.001, 100.0, "0.8 Hz")]
-Fraction = Annotated[float, _within("%", 0.01, 0.99, "10 %")]
-Degrees = Annotated[float, _within("deg", 30.0, 360.0, "270 deg")]
-
-
-class _Part(BaseModel):
-    """Base of everything in the file: frozen, no unknown keys."""
-
-    model_config = ConfigDict(
-        frozen=True, extra="forbid", validate_by_name=True, validate_by_alias=True
-    )
-
-
-class DividerReference(_Part):
+class DividerReference(Part):
     """Reference rail from a divider between supply and ground."""
 
     kind: Literal["divider"]
@@ -76,7 +49,7 @@ class DividerReference(_Part):
         return supply_v * self.lower_ohm / (self.upper_ohm + self.lower_ohm)
 
 
-class ZenerReference(_Part):
+class ZenerReference(Part):
     """Reference rail held by a zener."""
 
     kind: Literal["zener"]
@@ -87,7 +60,7 @@ class ZenerReference(_Part):
         return min(self.zener_v, supply_v)
 
 
-class Supply(_Part):
+class Supply(Part):
     """Supply voltage and how the reference rail is made from it."""
 
     voltage_v: SupplyVolts = Field(alias="voltage")
@@ -99,7 +72,7 @@ class Supply(_Part):
         return self.reference.above_ground_v(self.voltage_v)
 
 
-class OpAmp(_Part):
+class OpAmp(Part):
     """How near to its supply pins the op amps can drive and be driven."""
 
     headroom_high_v: HeadroomVolts = Field(default=1.5, alias="headroom_high")
@@ -108,14 +81,14 @@ class OpAmp(_Part):
     common_mode_low_v: HeadroomVolts = Field(default=3.0, alias="common_mode_low")
 
 
-class InputCoupling(_Part):
+class InputCoupling(Part):
     """Input coupling capacitor into a resistor to the reference rail, then a buffer."""
 
     capacitor_f: Farads = Field(alias="capacitor")
     resistor_ohm: Ohms = Field(alias="resistor")
 
 
-class Stage(_Part):
+class Stage(Part):
     """One phase-shifting stage.
 
     The capacitor leads from the stage's input to the op amp's plus input, where
@@ -130,7 +103,7 @@ class Stage(_Part):
     arm_out_ohm: Ohms = Field(alias="arm_out")
 
 
-class Feedback(_Part):
+class Feedback(Part):
     """Resistor from one stage's output into another's minus input; stages count from 1."""
 
     from_stage: int = Field(alias="from", ge=1, le=MAX_STAGES, strict=True)
@@ -138,14 +111,14 @@ class Feedback(_Part):
     resistor_ohm: Ohms = Field(alias="resistor")
 
 
-class Taper(_Part):
+class Taper(Part):
     """Resistance law of a knob: the share of the track, counter-clockwise end to wiper."""
 
     law: Literal["linear", "audio", "reverse-audio"] = "linear"
     middle_fraction: Fraction = Field(default=0.1, alias="middle")
 
 
-class RateKnob(_Part):
+class RateKnob(Part):
     """The rate knob, wired as a variable resistor in series with a fixed one."""
 
     track_ohm: Ohms = Field(alias="track")
@@ -155,7 +128,7 @@ class RateKnob(_Part):
     travel_degrees: Degrees = Field(default=300.0, alias="travel")
 
 
-class RelaxationOscillator(_Part):
+class RelaxationOscillator(Part):
     """Relaxation oscillator around one op amp.
 
     The rate knob leads from the output to the timing capacitor at the minus
@@ -171,7 +144,7 @@ class RelaxationOscillator(_Part):
     tap: Literal["buffered", "direct"]
 
 
-class TriangleOscillator(_Part):
+class TriangleOscillator(Part):
     """Integrator and comparator; the tap is the integrator's (low-impedance) output.
 
     The knob leads from the comparator's output into the integrator. The
@@ -186,7 +159,7 @@ class TriangleOscillator(_Part):
     threshold_out_ohm: Ohms = Field(alias="threshold_out")
 
 
-class PlainKnob(_Part):
+class PlainKnob(Part):
     """A rate knob known only by the rates at its ends."""
 
     slowest_hz: Hertz = Field(alias="slowest")
@@ -194,7 +167,7 @@ class PlainKnob(_Part):
     travel_degrees: Degrees = Field(default=300.0, alias="travel")
 
 
-class SineOscillator(_Part):
+class SineOscillator(Part):
     """A sine at the tap, about a mean level, from a low impedance."""
 
     kind: Literal["sine"]
@@ -203,7 +176,7 @@ class SineOscillator(_Part):
     knob: PlainKnob
 
 
-class MeasuredOscillator(_Part):
+class MeasuredOscillator(Part):
     """A tap known by its measured lowest and highest voltage, its shape and its rates."""
 
     kind: Literal["measured"]
@@ -219,7 +192,7 @@ Oscillator = Annotated[
 ]
 
 
-class Trimmer(_Part):
+class Trimmer(Part):
     """The bias trimmer between two rails, each over an end resistor (0 for none).
 
     A rail is ``"supply"``, ``"reference"``, ``"ground"`` or a voltage above ground.
@@ -235,7 +208,7 @@ class Trimmer(_Part):
     turns: int = Field(default=1, ge=1, le=50, strict=True)
 
 
-class HalfDrain(_Part):
+class HalfDrain(Part):
     """Network feeding part of each drain's voltage to its gate.
 
     Per stage, ``from_bus`` leads from the gate bus to the gate and
@@ -251,7 +224,7 @@ class HalfDrain(_Part):
         return self.from_bus_ohm / (self.from_bus_ohm + self.from_drain_ohm)
 
 
-class GateBus(_Part):
+class GateBus(Part):
     """The node on which all gates hang, and what feeds it."""
 
     bias_ohm: EndOhms = Field(alias="bias_resistor")
@@ -261,7 +234,7 @@ class GateBus(_Part):
     half_drain: HalfDrain | None = None
 
 
-class Mix(_Part):
+class Mix(Part):
     """Dry and wet mix resistors into one node, then the output coupling into its load."""
 
     dry_ohm: Ohms = Field(alias="dry")
@@ -270,7 +243,7 @@ class Mix(_Part):
     load_ohm: Ohms = Field(alias="load")
 
 
-class Circuit(_Part):
+class Circuit(Part):
     """One phase shifter, as printed on its schematic."""
 
     name: str = Field(min_length=1, max_length=200)
@@ -373,8 +346,8 @@ def replace_fields(part: Any, changes: dict[str, Any]) -> Any:
     for name in {path.split("__", 1)[0] for path in changes}:
         if name not in data:
             raise KeyError(f"{type(part).__name__} has no field {name!r}")
-        data[name] = changes[name] if name in changes else replace_fields(
-            data[name], _below(changes, name)
+        data[name] = (
+            changes[name] if name in changes else replace_fields(data[name], _below(changes, name))
         )
     return type(part)(**data)
 
@@ -403,120 +376,6 @@ def parse_circuit(data: dict[str, Any], source: str) -> Circuit:
         return Circuit.model_validate(data)
     except ValidationError as fault:
         raise InputError(explain_faults(fault, source, Circuit)) from None
-
-
-def explain_faults(fault: ValidationError, source: str, model: type[BaseModel]) -> list[str]:
-    """Return one plain message per fault: file, key's path, value, expectation, remedy."""
-    messages = []
-    for error in fault.errors(include_url=False):
-        path = _key_path(error["loc"])
-        kind = error["type"]
-        if kind == "extra_forbidden":
-            known = _keys_at(model, error["loc"][:-1])
-            hint = near_names(str(error["loc"][-1]), known)
-            text = f"unknown key{hint}" + (f"; known here: {', '.join(known)}" if known else "")
-        elif kind == "missing":
-            text = "missing; this key is needed"
-        elif kind == "union_tag_not_found":
-            text = "missing its key 'kind'; " + str(error["ctx"].get("discriminator", ""))
-        elif kind == "union_tag_invalid":
-            context = error["ctx"]
-            text = f"kind = {context['tag']!r} is not known; expected {context['expected_tags']}"
-        else:
-            text = error["msg"].removeprefix("Value error, ")
-            given = error.get("input")
-            if isinstance(given, str | int | float) and not isinstance(given, bool):
-                text = f"= {given!r}: {text}"
-        messages.append(f"{source}: {path} {text}" if path else f"{source}: {text}")
-    return messages
-
-
-_TAGS = {"divider", "zener", "relaxation", "triangle", "sine", "measured"}
-
-
-def _key_path(place: tuple[str | int, ...]) -> str:
-    """Return a fault's place as in the file: ``stage[2].capacitor``, counting from 1."""
-    path = ""
-    for step in place:
-        if isinstance(step, int):
-            path += f"[{step + 1}]"
-        elif step in _TAGS or "(" in step or "[" in step:
-            continue  # the branch of a union, which the file does not show
-        else:
-            path += f".{step}" if path else step
-    return path
-
-
-def _keys_at(model: type[BaseModel], place: tuple[str | int, ...]) -> list[str]:
-    """Return the file's keys known at this place, as far as it can be told."""
-    current: Any = model
-    tag = None
-    for step in place:
-        if isinstance(step, int):
-            continue
-        if step in _TAGS:
-            tag = step
-            continue
-        found = [f for n, f in current.model_fields.items() if step in (n, f.alias)]
-        if not found:
-            return []
-        choices = _models_in(found[0].annotation)
-        if not choices:
-            return []
-        current = choices[0] if len(choices) == 1 else choices
-    if isinstance(current, list):
-        current = next(
-            (m for m in current if tag in getattr(m.model_fields["kind"].annotation, "__args__", ())),
-            None,
-        )
-    if current is None:
-        return []
-    return [field.alias or name for name, field in current.model_fields.items()]
-
-
-def _models_in(annotation: Any) -> list[type[BaseModel]]:
-    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
-        return [annotation]
-    found: list[type[BaseModel]] = []
-    for inner in getattr(annotation, "__args__", ()):
-        found += _models_in(inner)
-    return found
-
-
-def read_toml(path: Path, what: str) -> dict[str, Any]:
-    """Return the content of a TOML file.
-
-    Parameters
-    ----------
-    path : Path
-        The file.
-    what : str
-        What the file should be, for messages ("circuit file").
-
-    Raises
-    ------
-    InputError
-        If it cannot be read, is too large or is not TOML.
-    """
-    try:
-        with path.open("rb") as stream:
-            raw = stream.read(MAX_FILE_BYTES + 1)
-    except FileNotFoundError:
-        raise InputError(f"{path}: no such {what}; check the name") from None
-    except OSError as fault:
-        raise InputError(f"{path}: cannot read this {what}: {fault.strerror}") from None
-    if len(raw) > MAX_FILE_BYTES:
-        raise InputError(f"{path}: larger than 1 MB, so not a {what}; give the right file")
-    if not raw.strip():
-        raise InputError(f"{path}: the file is empty; expected a {what}")
-    try:
-        return tomllib.loads(raw.decode("utf-8-sig"))
-    except UnicodeDecodeError as fault:
-        raise InputError(
-            f"{path}: not a text file in UTF-8 (byte {fault.start + 1}); expected a {what}"
-        ) from None
-    except (tomllib.TOMLDecodeError, RecursionError, ValueError) as fault:
-        raise InputError(f"{path}: not a valid {what} (TOML): {fault}") from None
 
 
 def shipped_circuits() -> dict[str, Callable[[], str]]:
