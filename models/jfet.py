@@ -96,6 +96,52 @@ def overdrive_inverse(p_v: float, knee_v: float) -> float:
     return p_v + knee_v * math.log(-math.expm1(-p_v / knee_v))
 
 
+def drain_current(
+    gate_v: ArrayLike,
+    drain_v: ArrayLike,
+    cutoff_v: ArrayLike,
+    beta_a_per_v2: ArrayLike,
+    lambda_per_v: ArrayLike,
+    knee_v: ArrayLike,
+) -> Array:
+    """Return the drain current of many parts at once, the law of this module [A].
+
+    Parameters
+    ----------
+    gate_v, drain_v : array_like
+        Gate to source and drain to source [V].
+    cutoff_v, beta_a_per_v2, lambda_per_v, knee_v : array_like
+        Parameters as in :class:`Jfet`. All arguments broadcast together.
+    """
+    u = np.asarray(gate_v, float) - np.asarray(cutoff_v, float)
+    v = np.asarray(drain_v, float)
+    square = overdrive(u, knee_v) ** 2 - overdrive(u - v, knee_v) ** 2
+    length = 1.0 + np.asarray(lambda_per_v, float) * np.abs(v)
+    return np.asarray(np.asarray(beta_a_per_v2, float) * length * square)
+
+
+def temperature_shift(
+    celsius: ArrayLike,
+    cutoff_v_per_k: float = DEFAULT_CUTOFF_V_PER_K,
+    beta_exponent: float = DEFAULT_BETA_EXPONENT,
+) -> tuple[Array, Array, Array]:
+    """Return what a temperature adds to cut-off [V], and times current factor and knee.
+
+    Parameters
+    ----------
+    celsius : array_like
+        Channel temperature, above -273.15 [degrees Celsius].
+    cutoff_v_per_k : float
+        Drift of the cut-off voltage [V/K].
+    beta_exponent : float
+        The current factor goes as absolute temperature to this power.
+    """
+    kelvin = np.asarray(celsius, float) + ZERO_CELSIUS_K
+    nominal = NOMINAL_CELSIUS + ZERO_CELSIUS_K
+    ratio = kelvin / nominal
+    return cutoff_v_per_k * (kelvin - nominal), ratio**beta_exponent, ratio
+
+
 @dataclass(frozen=True)
 class Jfet:
     """One n-channel part, described at the nominal 27 degrees Celsius.
@@ -181,13 +227,12 @@ class Jfet:
         celsius : float
             Channel temperature, above -273.15 [degrees Celsius].
         """
-        kelvin = celsius + ZERO_CELSIUS_K
-        nominal = NOMINAL_CELSIUS + ZERO_CELSIUS_K
+        added_v, factor, ratio = temperature_shift(celsius, self.cutoff_v_per_k, self.beta_exponent)
         return replace(
             self,
-            cutoff_v=self.cutoff_v + self.cutoff_v_per_k * (kelvin - nominal),
-            beta_a_per_v2=self.beta_a_per_v2 * (kelvin / nominal) ** self.beta_exponent,
-            knee_v=self.knee_v * kelvin / nominal,
+            cutoff_v=self.cutoff_v + float(added_v),
+            beta_a_per_v2=self.beta_a_per_v2 * float(factor),
+            knee_v=self.knee_v * float(ratio),
         )
 
     def current(self, gate_v: ArrayLike, drain_v: ArrayLike) -> Array:
@@ -198,12 +243,9 @@ class Jfet:
         gate_v, drain_v : array_like
             Gate to source and drain to source, broadcast together [V].
         """
-        u = np.asarray(gate_v, float) - self.cutoff_v
-        v = np.asarray(drain_v, float)
-        source_side = overdrive(u, self.knee_v)
-        drain_side = overdrive(u - v, self.knee_v)
-        square = source_side**2 - drain_side**2
-        return self.beta_a_per_v2 * (1.0 + self.lambda_per_v * np.abs(v)) * square
+        return drain_current(
+            gate_v, drain_v, self.cutoff_v, self.beta_a_per_v2, self.lambda_per_v, self.knee_v
+        )
 
     def transconductance(self, gate_v: ArrayLike, drain_v: ArrayLike) -> Array:
         """Return gm, the slope of current with gate voltage at fixed drain voltage [S]."""
@@ -221,9 +263,7 @@ class Jfet:
         square = overdrive(u, self.knee_v) ** 2 - drain_side**2
         slope = 2.0 * drain_side * overdrive_slope(u - v, self.knee_v)
         lam = self.lambda_per_v
-        return self.beta_a_per_v2 * (
-            (1.0 + lam * np.abs(v)) * slope + lam * np.sign(v) * square
-        )
+        return self.beta_a_per_v2 * ((1.0 + lam * np.abs(v)) * slope + lam * np.sign(v) * square)
 
     def channel_conductance(self, gate_v: ArrayLike) -> Array:
         """Return the small-signal channel conductance at zero drain voltage [S]."""
