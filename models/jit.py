@@ -31,7 +31,7 @@ KEPT_CACHES = 4
 
 
 def kernel_sources() -> list[Path]:
-    """Return the files whose code is compiled: this one and every ``*kernels.py`` of the package."""
+    """Return the files whose code is compiled: this one and the package's ``*kernels.py``."""
     models = Path(__file__).resolve().parent
     folders = {models}
     render = sys.modules.get("sweepset.render")
@@ -64,7 +64,9 @@ def cache_folder() -> Path | None:
     import platformdirs
 
     try:
-        above = os.environ.get("SWEEPSET_CACHE_DIR") or platformdirs.user_cache_dir("sweepset", False)
+        above = os.environ.get("SWEEPSET_CACHE_DIR") or platformdirs.user_cache_dir(
+            "sweepset", False
+        )
         base = Path(above) / "kernels"
         folder = base / source_hash()
         folder.mkdir(parents=True, exist_ok=True)

@@ -3,9 +3,10 @@
 ``lane_kernel`` builds the fast loop: stages and lanes are compile-time constants,
 lanes (takes, channels or time slices) lie innermost so that the compiler runs
 several in one instruction. Each sample takes one or two Newton passes over all
-stages at once, from a start extrapolated through the last four samples: every stage's slope first, which makes each stage an affine map of its input;
-the maps are composed, the feedback loop is closed with one division, and the
-voltages are substituted back. ``careful_kernel`` is the scalar loop for what that
+stages at once, from a start extrapolated through the last four samples: every
+stage's slope first, which makes each stage an affine map of its input; the maps
+are composed, the feedback loop is closed with one division, and the voltages are
+substituted back. ``careful_kernel`` is the scalar loop for what that
 cannot hold: op-amp outputs at their rails and steps that need more passes.
 
 All working memory of the fast loop is one flat array with compile-time offsets:
@@ -93,12 +94,12 @@ def lane_kernel(
     @kernel(boundscheck=False)
     def run(x, gate, out, lane, stage, state, first, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
         for s in range(S):
-            for l in range(L):
-                i = s * L + l
+            for j in range(L):
+                i = s * L + j
                 for k in range(STATES):
-                    work[k * SL + i] = state[k, s, l]
+                    work[k * SL + i] = state[k, s, j]
                 for k in range(5):
-                    work[OVC + k * SL + i] = lane[k, s, l]
+                    work[OVC + k * SL + i] = lane[k, s, j]
         for i in range(OCH, SIZE):
             work[i] = 0.0
         for n in range(x.shape[0]):
@@ -108,9 +109,9 @@ def lane_kernel(
             # What the gate and the past settle: overdrive, source side, history, start.
             for s in range(S):
                 w1, w2, w3 = stage[W1, s], stage[W2, s], stage[W3, s]
-                for l in range(L):
-                    i = s * L + l
-                    u = keep * gate[n, l] - work[OVC + i]
+                for j in range(L):
+                    i = s * L + j
+                    u = keep * gate[n, j] - work[OVC + i]
                     work[OU + i] = u
                     if not half_drain:
                         p, _ = positive(u, work[OW + i], work[OPW + i], soft)
@@ -121,15 +122,15 @@ def lane_kernel(
                         4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
                     )
             for turn in range(passes):
-                for l in range(L):
-                    work[OX + l] = x[n, l]
-                    work[OY + l] = 0.0
+                for j in range(L):
+                    work[OX + j] = x[n, j]
+                    work[OY + j] = 0.0
                 # Every stage as an affine map of its input, composed along the chain.
                 for s in range(S):
                     hs, hn = stage[HSHUNT, s], stage[HNET, s]
                     a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
-                    for l in range(L):
-                        i = s * L + l
+                    for j in range(L):
+                        i = s * L + j
                         v = work[OV + i]
                         u = work[OU + i]
                         w, pw = work[OW + i], work[OPW + i]
@@ -153,43 +154,43 @@ def lane_kernel(
                         g = hb * square + hs * v
                         dg = hb * slope + hs
                         if half_drain:
-                            g += hn * (v - gate[n, l])
+                            g += hn * (v - gate[n, j])
                             dg += hn
                         d = 1.0 / (1.0 + w0 * dg)
                         alpha = v - d * (v + w0 * g + work[OHIST + i])
                         work[OD + i] = d
                         work[OALPHA + i] = alpha
                         work[OBEND + i] = hb * bend
-                        px = work[OX + l]
+                        px = work[OX + j]
                         work[OP + i] = px
                         gain = a * d - b
-                        work[OX + l] = gain * px + a * alpha
+                        work[OX + j] = gain * px + a * alpha
                         if feedback:
-                            qx = work[OY + l]
+                            qx = work[OY + j]
                             work[OQQ + i] = qx
-                            work[OY + l] = gain * qx - c
+                            work[OY + j] = gain * qx - c
                     if s == frm:
-                        for l in range(L):
-                            work[OF + l] = work[OX + l] / (1.0 - work[OY + l])
+                        for j in range(L):
+                            work[OF + j] = work[OX + j] / (1.0 - work[OY + j])
                 if feedback:
-                    for l in range(L):
-                        work[OX + l] += work[OY + l] * work[OF + l]
+                    for j in range(L):
+                        work[OX + j] += work[OY + j] * work[OF + j]
                 last = turn == passes - 1
                 # Back into the stages; after the last pass the state moves on.
                 for s in range(S):
                     w0 = stage[W0, s]
                     per_w0 = 1.0 / w0
-                    for l in range(L):
-                        i = s * L + l
+                    for j in range(L):
+                        i = s * L + j
                         xs = work[OP + i]
                         if feedback:
-                            xs += work[OQQ + i] * work[OF + l]
+                            xs += work[OQQ + i] * work[OF + j]
                         v = work[OD + i] * xs + work[OALPHA + i]
                         if last:
                             move = v - work[OV + i]
-                            work[OCH + l] = max(work[OCH + l], abs(move))
+                            work[OCH + j] = max(work[OCH + j], abs(move))
                             if s > 0:
-                                work[OTOP + l] = max(work[OTOP + l], abs(xs))
+                                work[OTOP + j] = max(work[OTOP + j], abs(xs))
                             # The charge follows the law to second order about the start;
                             # what the pass left out there always has one sign and would add up.
                             g = (xs - v - work[OHIST + i]) * per_w0 + work[OBEND + i] * move * move
@@ -203,32 +204,32 @@ def lane_kernel(
                             work[OV1 + i] = v
                         else:
                             work[OV + i] = v
-            for l in range(L):
-                work[OTOP + l] = max(work[OTOP + l], abs(work[OX + l]))
+            for j in range(L):
+                work[OTOP + j] = max(work[OTOP + j], abs(work[OX + j]))
             if n >= first:
-                for l in range(L):
-                    out[n, l] = work[OX + l]
+                for j in range(L):
+                    out[n, j] = work[OX + j]
             if n % COUNT_EVERY == 0:
                 for s in range(S):
-                    for l in range(L):
-                        v = work[OV1 + s * L + l]
-                        own = keep * gate[n, l] + (1.0 - keep) * v
-                        work[OGS + l] += 1.0 if own > conduct else 0.0
-                        work[OGD + l] += 1.0 if own - v > conduct else 0.0
-                        work[OLO + l] += 1.0 if v < low else 0.0
-                        work[OHI + l] += 1.0 if v > high else 0.0
+                    for j in range(L):
+                        v = work[OV1 + s * L + j]
+                        own = keep * gate[n, j] + (1.0 - keep) * v
+                        work[OGS + j] += 1.0 if own > conduct else 0.0
+                        work[OGD + j] += 1.0 if own - v > conduct else 0.0
+                        work[OLO + j] += 1.0 if v < low else 0.0
+                        work[OHI + j] += 1.0 if v > high else 0.0
         for s in range(S):
-            for l in range(L):
-                i = s * L + l
+            for j in range(L):
+                i = s * L + j
                 for k in range(STATES):
-                    state[k, s, l] = work[k * SL + i]
-        for l in range(L):
-            tally[l, GATE_SOURCE] += COUNT_EVERY * work[OGS + l]
-            tally[l, GATE_DRAIN] += COUNT_EVERY * work[OGD + l]
-            tally[l, LOW_INPUT] += COUNT_EVERY * work[OLO + l]
-            tally[l, HIGH_INPUT] += COUNT_EVERY * work[OHI + l]
-            tally[l, TOP] = work[OTOP + l]
-            tally[l, CHANGE] = work[OCH + l]
+                    state[k, s, j] = work[k * SL + i]
+        for j in range(L):
+            tally[j, GATE_SOURCE] += COUNT_EVERY * work[OGS + j]
+            tally[j, GATE_DRAIN] += COUNT_EVERY * work[OGD + j]
+            tally[j, LOW_INPUT] += COUNT_EVERY * work[OLO + j]
+            tally[j, HIGH_INPUT] += COUNT_EVERY * work[OHI + j]
+            tally[j, TOP] = work[OTOP + j]
+            tally[j, CHANGE] = work[OCH + j]
 
     return run, SIZE
 
@@ -276,7 +277,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         low,
         high,
         keep,
-        l,
+        j,
         frm,
         rail_low,
         rail_high,
@@ -294,30 +295,30 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         )
         fed = 0.0
         for n in range(x.shape[0]):
-            bus = gate[n, l]
+            bus = gate[n, j]
             for s in range(S):
                 hist[s] = (
-                    state[Q1, s, l]
-                    + stage[W1, s] * state[G1, s, l]
-                    + stage[W2, s] * state[G2, s, l]
-                    + stage[W3, s] * state[G3, s, l]
+                    state[Q1, s, j]
+                    + stage[W1, s] * state[G1, s, j]
+                    + stage[W2, s] * state[G2, s, j]
+                    + stage[W3, s] * state[G3, s, j]
                 )
                 v[s] = (
-                    4.0 * (state[V1, s, l] + state[V3, s, l])
-                    - 6.0 * state[V2, s, l]
-                    - state[V4, s, l]
+                    4.0 * (state[V1, s, j] + state[V3, s, j])
+                    - 6.0 * state[V2, s, j]
+                    - state[V4, s, j]
                 )
             done = False
             for turn in range(most_passes):
                 for s in range(S):
-                    u = keep * bus - lane[VC, s, l]
-                    lam, w, pw = lane[LAMBDA, s, l], lane[KNEE, s, l], lane[PER_KNEE, s, l]
+                    u = keep * bus - lane[VC, s, j]
+                    lam, w, pw = lane[LAMBDA, s, j], lane[KNEE, s, j], lane[PER_KNEE, s, j]
                     pd, sd = positive(u - keep * v[s], w, pw, soft)
                     ps, ss = positive(u + (1.0 - keep) * v[s], w, pw, soft)
                     lin = 1.0 + lam * abs(v[s])
                     square = ps * ps - pd * pd
                     slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
-                    hb = lane[HBETA, s, l]
+                    hb = lane[HBETA, s, j]
                     g = hb * lin * square + stage[HSHUNT, s] * v[s]
                     dg = hb * lin * slope + stage[HSHUNT, s]
                     if half_drain:
@@ -330,7 +331,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     a0, b0 = rail_low, rail_high
                     miss = (
                         chain(
-                            x[n, l], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
+                            x[n, j], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
                         )
                         - fed
                     )
@@ -338,7 +339,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     probe = fed + 1e-3
                     step = (
                         chain(
-                            x[n, l],
+                            x[n, j],
                             probe,
                             d,
                             alpha,
@@ -358,7 +359,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     fed = min(max(fed, rail_low), rail_high)
                     miss = (
                         chain(
-                            x[n, l], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
+                            x[n, j], fed, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys
                         )
                         - fed
                     )
@@ -367,7 +368,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                             fed = 0.5 * (a0 + b0)
                             miss = (
                                 chain(
-                                    x[n, l],
+                                    x[n, j],
                                     fed,
                                     d,
                                     alpha,
@@ -389,7 +390,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                             if abs(miss) < 1e-15 or b0 - a0 < 1e-15:
                                 break
                 else:
-                    chain(x[n, l], 0.0, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys)
+                    chain(x[n, j], 0.0, d, alpha, stage, S, frm, rail_low, rail_high, new, xs, ys)
                 change = 0.0
                 for s in range(S):
                     move = new[s] - v[s]
@@ -401,29 +402,29 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     break
             if n == first:
                 for k in range(TALLIES):
-                    tally[l, k] = 0.0
+                    tally[j, k] = 0.0
             clipped = False
             for s in range(S):
                 if ys[s] <= rail_low or ys[s] >= rail_high:
                     clipped = True
                 q = xs[s] - v[s]
-                state[G3, s, l] = state[G2, s, l]
-                state[G2, s, l] = state[G1, s, l]
-                state[G1, s, l] = (q - hist[s]) / stage[W0, s]
-                state[Q1, s, l] = q
-                state[V4, s, l] = state[V3, s, l]
-                state[V3, s, l] = state[V2, s, l]
-                state[V2, s, l] = state[V1, s, l]
-                state[V1, s, l] = v[s]
+                state[G3, s, j] = state[G2, s, j]
+                state[G2, s, j] = state[G1, s, j]
+                state[G1, s, j] = (q - hist[s]) / stage[W0, s]
+                state[Q1, s, j] = q
+                state[V4, s, j] = state[V3, s, j]
+                state[V3, s, j] = state[V2, s, j]
+                state[V2, s, j] = state[V1, s, j]
+                state[V1, s, j] = v[s]
                 if n % COUNT_EVERY == 0:
                     own = keep * bus + (1.0 - keep) * v[s]
-                    tally[l, GATE_SOURCE] += COUNT_EVERY if own > conduct else 0.0
-                    tally[l, GATE_DRAIN] += COUNT_EVERY if own - v[s] > conduct else 0.0
-                    tally[l, LOW_INPUT] += COUNT_EVERY if v[s] < low else 0.0
-                    tally[l, HIGH_INPUT] += COUNT_EVERY if v[s] > high else 0.0
-            tally[l, RAIL] += 1.0 if clipped else 0.0
-            tally[l, STUCK] += 0.0 if done else 1.0
+                    tally[j, GATE_SOURCE] += COUNT_EVERY if own > conduct else 0.0
+                    tally[j, GATE_DRAIN] += COUNT_EVERY if own - v[s] > conduct else 0.0
+                    tally[j, LOW_INPUT] += COUNT_EVERY if v[s] < low else 0.0
+                    tally[j, HIGH_INPUT] += COUNT_EVERY if v[s] > high else 0.0
+            tally[j, RAIL] += 1.0 if clipped else 0.0
+            tally[j, STUCK] += 0.0 if done else 1.0
             if n >= first:
-                out[n, l] = ys[S - 1]
+                out[n, j] = ys[S - 1]
 
     return run

@@ -169,17 +169,17 @@ class LaneRunner:
             What was counted from frame `first` on.
         """
         out, tally = self._pass(x, gate, first, passes=1)
-        again = self._unfit(tally)
+        again = self._unfit(out, tally)
         if len(again):
             # Lanes are independent: what one lane gets does not depend on its neighbours.
             better, counted = self._pass(x, gate, first, passes=2)
             out[:, again] = better[:, again]
             tally[again] = counted[again]
-            again = again[np.isin(again, self._unfit(counted))]
+            again = again[np.isin(again, self._unfit(better, counted))]
         tally[:, TOP] = tally[:, CHANGE] = 0.0
         if len(again):
             self._carefully(again, x, gate, first, out, tally)
-        total = tally.sum(axis=0)
+        total = [float(count) for count in tally.sum(axis=0)]
         steps = float(len(again) * (len(x) - first))
         return out[first:], Tally(*total[:4], *total[6:8], steps)
 
@@ -195,10 +195,14 @@ class LaneRunner:
         )  # fmt: skip
         return out, tally
 
-    def _unfit(self, tally: Array) -> npt.NDArray[np.intp]:
-        """Return the lanes that came to a rail or whose last pass corrected too much."""
+    def _unfit(self, out: Array, tally: Array) -> npt.NDArray[np.intp]:
+        """Return the lanes that came to a rail or whose last pass corrected too much.
+
+        A lane that ran away ends in NaN, which the loop's comparisons pass over.
+        """
         limit = min(abs(rail) for rail in self.rails)
         fit = (tally[:, TOP] < limit) & (tally[:, CHANGE] < self.change_limit_v)
+        fit &= np.isfinite(out[-1])
         return np.flatnonzero(~fit)
 
     def _carefully(

@@ -2,7 +2,8 @@
 
 ``P(x) = w ln(1 + exp(x/w))`` is computed as ``max(x, 0) + w log1p(z)`` with
 ``z = exp(-|x|/w)``. The library's exp and log1p would break the vectoriser, so both
-are minimax polynomials (in pairs, for a short chain of dependent steps), fitted by iteratively reweighted least squares:
+are minimax polynomials (in pairs, for a short chain of dependent steps), fitted by
+iteratively reweighted least squares:
 
 * ``exp`` by ``2^k 2^f`` with a polynomial of degree 7 in ``f`` (relative error 4e-11),
 * ``log1p(z) = r q(r^2)`` with ``r = z/(2 + z)`` and ``q`` of degree 5 (1e-10).

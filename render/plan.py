@@ -258,7 +258,7 @@ class _Trial:
         rate = self.sample_rate * factor
         size = 2048 * max(1, factor)
         tone = min(ALIAS_TONE_HZ, 0.2 * self.sample_rate)
-        cycles = int(round(tone * size / rate)) | 1
+        cycles = round(tone * size / rate) | 1
         while np.gcd(cycles, size) != 1:
             cycles += 2
         # The sine must have settled: what is left of its start would pass for aliases.
