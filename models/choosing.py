@@ -1,0 +1,348 @@
+"""Which parts go into which stages: the questions asked of a tray, and their answers.
+
+Sets are ranked by expected stagger over the circuit's sweep at the set's own bias;
+sets whose travel is under 90 % of a uniform set's rank after the others. The search
+(``closing``) is exact on a grid of trimmer positions; the sets it leaves, all within a
+few per cent of the best, are then biased and judged by the full response (``bias``).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from .closing import Search, search_sets
+from .errors import InputError, near_names
+from .expected import expected_stagger
+from .pairwise import Parts, parts_of
+from .sweepgrid import TRAVEL_SHARE, SweepGrid, build_grid
+
+if TYPE_CHECKING:
+    from .bias import Bias
+    from .circuit import Circuit
+    from .estimate import TrayEstimate
+    from .jfet import Jfet
+    from .quantity import Setting
+
+FINALISTS = 4
+# A search at mean shunt only points the way where shunts differ; look farther around.
+UNEQUAL_MARGIN = 1.5
+# The poor set takes parts at evenly spaced ranks between these, so that the tray's
+# freaks, which nobody would solder in, stay out of it.
+POOR_RANKS = (0.05, 0.95)
+
+
+@dataclass(frozen=True)
+class SetFigures:
+    """A set in stage order at its own bias.
+
+    Parameters
+    ----------
+    labels : tuple of str
+        Parts, stage 1 first.
+    jfets : tuple of Jfet
+        Their estimates.
+    bias : Bias
+        Trimmer position and what the set does there.
+    expected_stagger_octaves : float
+        Root of the expected squared stagger under the readings' covariance [octaves].
+    travel_share : float
+        Travel over that of a uniform set of the mean part at its own bias.
+    order_matters : bool
+        Another order of the same parts would behave differently.
+    """
+
+    labels: tuple[str, ...]
+    jfets: tuple[Jfet, ...]
+    bias: Bias
+    expected_stagger_octaves: float
+    travel_share: float
+    order_matters: bool
+
+    @property
+    def full_travel(self) -> bool:
+        """Whether travel is 90 % of a uniform set's or more."""
+        return self.travel_share >= TRAVEL_SHARE
+
+    @property
+    def rank(self) -> tuple[bool, float]:
+        """Sort key: full travel first, then expected stagger."""
+        return (not self.full_travel, self.expected_stagger_octaves)
+
+
+@dataclass(frozen=True)
+class Choice:
+    """The best set and how far that is proven.
+
+    Parameters
+    ----------
+    best : SetFigures
+        The set.
+    next_best : tuple of SetFigures
+        Other finalists, in rank order; they may share parts with the best.
+    search : Search
+        The search on the grid.
+    proven : bool
+        The search closed, and on this circuit its distances are exact (equal shunts).
+    bound_octaves : float
+        Least expected stagger, on the grid, of any set not judged by the full response.
+    """
+
+    best: SetFigures
+    next_best: tuple[SetFigures, ...]
+    search: Search
+    proven: bool
+    bound_octaves: float
+
+    @property
+    def gap(self) -> float:
+        """How far below the best the bound lies, as a fraction of the best; 0 when closed."""
+        best = self.best.expected_stagger_octaves
+        return max(0.0, 1.0 - self.bound_octaves / best) if best > 0.0 else 0.0
+
+
+def order_matters(circuit: Circuit) -> bool:
+    """Return whether the order of parts changes what a set does in this circuit."""
+    first = circuit.stages[0]
+    alike = all(
+        math.isclose(stage.capacitor_f, first.capacitor_f)
+        and math.isclose(stage.shunt_ohm, first.shunt_ohm)
+        and math.isclose(stage.arm_out_ohm, stage.arm_in_ohm)
+        for stage in circuit.stages
+    )
+    return circuit.feedback is not None or not alike
+
+
+def equal_shunts(circuit: Circuit) -> bool:
+    """Return whether all stages have the same shunt resistor."""
+    first = circuit.stages[0].shunt_ohm
+    return all(math.isclose(stage.shunt_ohm, first) for stage in circuit.stages)
+
+
+def set_figures(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    labels: Sequence[str],
+    *,
+    ordered: bool = False,
+    fixed_stages: Mapping[int, str] | None = None,
+) -> SetFigures:
+    """Return what a set does at its own bias.
+
+    Parameters
+    ----------
+    estimate : TrayEstimate
+        The tray's parameters.
+    circuit : Circuit
+        The circuit.
+    rate : Setting
+        The rate.
+    labels : sequence of str
+        One part a stage.
+    ordered : bool
+        Keep the order given; otherwise the best order is found where order matters,
+        and elsewhere the parts stand in the tray's order.
+    fixed_stages : mapping of int to str, optional
+        Stages (from 0) whose part must stay.
+    """
+    from .bias import solve_bias
+    from .ordering import best_order
+
+    matters = order_matters(circuit)
+    names = list(labels)
+    if not ordered:
+        place = {label: n for n, label in enumerate(estimate.labels)}
+        held = dict(fixed_stages or {})
+        free = sorted((name for name in names if name not in held.values()), key=place.__getitem__)
+        names = [held[n] if n in held else free.pop(0) for n in range(len(names))]
+        if matters:
+            first = solve_bias(circuit, [estimate.jfet(name) for name in names], rate)
+            order = best_order(
+                circuit, [estimate.jfet(name) for name in names], first.bus, frozenset(held)
+            )
+            names = [names[n] for n in order]
+    jfets = tuple(estimate.jfet(name) for name in names)
+    bias = solve_bias(circuit, list(jfets), rate)
+    expected = expected_stagger(parts_of(estimate, names), circuit, bias.bus)
+    return SetFigures(
+        labels=tuple(names),
+        jfets=jfets,
+        bias=bias,
+        expected_stagger_octaves=expected,
+        travel_share=bias.travel_octaves / bias.uniform_travel_octaves,
+        order_matters=matters,
+    )
+
+
+def best_set(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    *,
+    labels: Sequence[str] | None = None,
+    finalists: int = FINALISTS,
+) -> Choice:
+    """Return the set of least expected stagger at its own bias.
+
+    Parameters
+    ----------
+    estimate : TrayEstimate
+        The tray's parameters.
+    circuit : Circuit
+        The circuit.
+    rate : Setting
+        The rate.
+    labels : sequence of str, optional
+        Choose from these parts only.
+    finalists : int
+        Sets to judge by the full response.
+
+    Raises
+    ------
+    InputError
+        If there are fewer parts than stages.
+    """
+    wanted = tuple(estimate.labels if labels is None else labels)
+    _enough(wanted, circuit)
+    grid = build_grid(parts_of(estimate, wanted), circuit, rate)
+    return _judge(estimate, circuit, rate, grid, {}, finalists)
+
+
+def complete_set(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    fixed_stages: Mapping[int, str],
+    *,
+    labels: Sequence[str] | None = None,
+    finalists: int = FINALISTS,
+) -> Choice:
+    """Return the best completion of a partly fixed set.
+
+    Parameters
+    ----------
+    estimate : TrayEstimate
+        Parameters of the fixed and of the free parts; an unknown soldered part stands
+        in it with the type assumption's mean and spread.
+    circuit, rate
+        As for :func:`best_set`.
+    fixed_stages : mapping of int to str
+        Stage (from 0) to the part that stays there.
+    labels : sequence of str, optional
+        Free parts to choose from; all others of the estimate when left out.
+    finalists : int
+        Sets to judge by the full response.
+
+    Raises
+    ------
+    InputError
+        If a stage or a part does not exist, a part stands twice, or parts are missing.
+    """
+    faults = []
+    known = set(estimate.labels)
+    for stage, label in fixed_stages.items():
+        if not 0 <= stage < circuit.stage_count:
+            faults.append(
+                f"stage {stage + 1} does not exist; {circuit.name} has stages 1 to "
+                f"{circuit.stage_count}"
+            )
+        if label not in known:
+            faults.append(f"no part {label!r} on the tray{near_names(label, known)}")
+    held = list(fixed_stages.values())
+    faults += [
+        f"part {label!r} stands in more than one stage; a part can be soldered in once"
+        for label in sorted(set(held))
+        if held.count(label) > 1
+    ]
+    if faults:
+        raise InputError(faults)
+    pool = estimate.labels if labels is None else labels
+    free = [label for label in pool if label not in set(held)]
+    _enough((*held, *free), circuit)
+    grid = build_grid(parts_of(estimate, (*held, *free)), circuit, rate)
+    return _judge(estimate, circuit, rate, grid, dict(fixed_stages), finalists)
+
+
+def poor_set(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    *,
+    avoid: Sequence[str] = (),
+    labels: Sequence[str] | None = None,
+) -> SetFigures:
+    """Return a deliberately poor set for comparison: one part from each region of the tray.
+
+    The rule: order the parts by their mean break frequency over the sweep, at the
+    trimmer position that suits most of them, and take those at evenly spaced ranks
+    from 5 % to 95 %. It is what a careless hand takes from the tray; the freaks at
+    its ends stay out.
+
+    Parameters
+    ----------
+    estimate, circuit, rate, labels
+        As for :func:`best_set`.
+    avoid : sequence of str
+        Parts not to use, such as those of the set to compare with.
+
+    Raises
+    ------
+    InputError
+        If too few parts are left.
+    """
+    pool = estimate.labels if labels is None else labels
+    wanted = tuple(label for label in pool if label not in set(avoid))
+    _enough(wanted, circuit)
+    grid = build_grid(parts_of(estimate, wanted), circuit, rate)
+    place = int(np.bincount(grid.uniform_place).argmax())
+    order = np.argsort(grid.level[place].mean(axis=1), kind="stable")
+    low, high = (share * (len(wanted) - 1) for share in POOR_RANKS)
+    ranks = np.rint(np.linspace(low, high, circuit.stage_count)).astype(int)
+    if np.unique(ranks).size < ranks.size:  # hardly more parts than stages
+        ranks = np.rint(np.linspace(0, len(wanted) - 1, circuit.stage_count)).astype(int)
+    return set_figures(estimate, circuit, rate, [wanted[order[rank]] for rank in ranks])
+
+
+def _judge(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    grid: SweepGrid,
+    fixed_stages: dict[int, str],
+    finalists: int,
+) -> Choice:
+    """Search the grid, bias the finalists exactly, and put them in rank order."""
+    equal = equal_shunts(circuit)
+    search = (
+        search_sets(grid, fixed=len(fixed_stages))
+        if equal
+        else search_sets(grid, fixed=len(fixed_stages), margin=UNEQUAL_MARGIN)
+    )
+    names = grid.parts.labels
+    judged = [
+        set_figures(estimate, circuit, rate, [names[i] for i in members], fixed_stages=fixed_stages)
+        for members in search.sets[:finalists]
+    ]
+    judged.sort(key=lambda one: one.rank)
+    left = search.stagger_octaves[finalists:]
+    bound = float(left[0]) if left.size else search.bound_octaves
+    return Choice(
+        best=judged[0],
+        next_best=tuple(judged[1:]),
+        search=search,
+        proven=search.closed and equal,
+        bound_octaves=min(bound, search.bound_octaves),
+    )
+
+
+def _enough(labels: Sequence[str], circuit: Circuit) -> None:
+    if len(labels) < circuit.stage_count:
+        raise InputError(
+            f"{circuit.name} has {circuit.stage_count} stages but only {len(labels)} parts are at "
+            "hand; measure more parts, or give a circuit with fewer stages"
+        )

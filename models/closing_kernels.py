@@ -1,0 +1,457 @@
+"""Loops of the search over sets: own bias on a grid of trimmer positions, and branch and bound.
+
+IEEE arithmetic with contraction (see jit.py); the order of the sums is fixed, so
+that a set's figures do not depend on the path that led to it.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+
+from .jit import kernel
+
+
+@kernel()
+def notch_octave(level: Any, members: Any, count: int, target: float) -> float:
+    """Return log2 of the frequency at which the stages' arctangents sum to `target`."""
+    low = level[members[0]]
+    high = low
+    mean = 0.0
+    for m in range(count):
+        value = level[members[m]]
+        low = min(low, value)
+        high = max(high, value)
+        mean += value
+    shift = math.log2(math.tan(target / count))
+    y = mean / count + shift
+    for _ in range(6):
+        total = -target
+        slope = 0.0
+        for m in range(count):
+            ratio = 2.0 ** (y - level[members[m]])
+            total += math.atan(ratio)
+            slope += ratio / (1.0 + ratio * ratio)
+        step = total / (slope * 0.6931471805599453)
+        y = min(max(y - step, low + shift), high + shift)
+        if abs(step) < 1e-7:
+            break
+    return y
+
+
+@kernel()
+def travel_and_stall(
+    level: Any,
+    slope: Any,
+    low: Any,
+    high: Any,
+    swing: float,
+    members: Any,
+    count: int,
+    targets: Any,
+    band_low: float,
+    band_high: float,
+) -> tuple[float, float]:
+    """Return travel [octaves] and stall of a set at one trimmer position."""
+    travel = 1e300
+    for k in range(targets.shape[0]):
+        bottom = max(notch_octave(low, members, count, targets[k]), band_low)
+        top = min(notch_octave(high, members, count, targets[k]), band_high)
+        travel = min(travel, max(top - bottom, 0.0))
+    if travel > 1e299:
+        travel = 0.0
+    times = level.shape[1]
+    least = 1e300
+    most = -1e300
+    for t in range(times):
+        mean = 0.0
+        for m in range(count):
+            mean += level[members[m], t]
+        least = min(least, mean)
+        most = max(most, mean)
+    matters = 0.25 * (most - least) / count
+    stopped = 0
+    for t in range(times):
+        largest = 0.0
+        smallest = 1e300
+        for m in range(count):
+            value = slope[members[m], t]
+            largest = max(largest, value)
+            smallest = min(smallest, value)
+        if smallest < 0.25 * largest and largest * swing > matters:
+            stopped += 1
+    return travel, stopped / times
+
+
+@kernel()
+def own_position(
+    level: Any,
+    slope: Any,
+    low: Any,
+    high: Any,
+    swing: Any,
+    members: Any,
+    count: int,
+    targets: Any,
+    band_low: float,
+    band_high: float,
+    objective: Any,
+) -> tuple[int, float, float]:
+    """Return place, travel and stall of the best grid position; fill `objective` (positions,)."""
+    best = -1.0
+    place = 0
+    best_travel = 0.0
+    best_stall = 0.0
+    for q in range(level.shape[0]):
+        travel, stall = travel_and_stall(
+            level[q],
+            slope[q],
+            low[q],
+            high[q],
+            swing[q],
+            members,
+            count,
+            targets,
+            band_low,
+            band_high,
+        )
+        objective[q] = travel * (1.0 - stall)
+        if objective[q] > best:
+            best = objective[q]
+            place = q
+            best_travel = travel
+            best_stall = stall
+    return place, best_travel, best_stall
+
+
+@kernel()
+def own_positions(
+    level: Any,
+    slope: Any,
+    low: Any,
+    high: Any,
+    swing: Any,
+    sets: Any,
+    targets: Any,
+    band_low: float,
+    band_high: float,
+    places: Any,
+    travels: Any,
+    stalls: Any,
+    objectives: Any,
+) -> None:
+    """Fill place, travel, stall (sets,) and objectives (sets, positions) of many sets."""
+    for n in range(sets.shape[0]):
+        places[n], travels[n], stalls[n] = own_position(
+            level,
+            slope,
+            low,
+            high,
+            swing,
+            sets[n],
+            sets.shape[1],
+            targets,
+            band_low,
+            band_high,
+            objectives[n],
+        )
+
+
+@kernel()
+def after(distance: Any, i: int, j: int, pair_distance: float, pair_key: int) -> bool:
+    """Return whether pair (i, j) comes after the given pair, by distance, then by place."""
+    value = distance[i, j]
+    if value != pair_distance:
+        return bool(value > pair_distance)
+    return min(i, j) * distance.shape[0] + max(i, j) > pair_key
+
+
+@kernel()
+def sort_by(keys: Any, items: Any, start: int, stop: int) -> None:
+    """Sort keys[start:stop] ascending, carrying items along."""
+    if stop - start > 24:
+        order = np.argsort(keys[start:stop], kind="mergesort")
+        old_keys = keys[start:stop].copy()
+        old_items = items[start:stop].copy()
+        for n in range(stop - start):
+            keys[start + n] = old_keys[order[n]]
+            items[start + n] = old_items[order[n]]
+        return
+    for n in range(start + 1, stop):
+        key = keys[n]
+        item = items[n]
+        m = n - 1
+        while m >= start and keys[m] > key:
+            keys[m + 1] = keys[m]
+            items[m + 1] = items[m]
+            m -= 1
+        keys[m + 1] = key
+        items[m + 1] = item
+
+
+@kernel()
+def least_whole(pair_sum: float, own_sum: float, size: int, count: int, least_own: float) -> float:
+    """Return the least sum of distances over a whole set that holds these `size` members.
+
+    A sum over pairs is ``size`` times the squares about the members' own centre
+    plus ``size - 1`` times their own variances; about the whole set's centre the
+    squares cannot be less.
+    """
+    square = (pair_sum - (size - 1) * own_sum) / size
+    return count * square + (count - 1) * (own_sum + (count - size) * least_own)
+
+
+@kernel()
+def close_position(
+    place: int,
+    distance: Any,
+    own_variance: Any,
+    part: Any,
+    pair_first: Any,
+    pair_second: Any,
+    fixed_count: int,
+    count: int,
+    level: Any,
+    slope: Any,
+    low: Any,
+    high: Any,
+    swing: Any,
+    targets: Any,
+    band_low: float,
+    band_high: float,
+    uniform_travel: Any,
+    uniform_place: Any,
+    travel_share: float,
+    start_limit: float,
+    margin: float,
+    node_limit: int,
+    kept_value: Any,
+    kept_sets: Any,
+    kept_place: Any,
+    kept_count: int,
+) -> tuple[int, int, float, int]:
+    """Visit every set that may be as good as the best so far, with this place as its own bias.
+
+    Sets grow from their closest pair, taken in ascending distance; all other pairs
+    of the set then come after it, which gives each set one path and bounds what
+    is still to be added. With `fixed_count` parts fixed (the first of the list),
+    sets grow from those. ``kept_*`` hold the best sets so far, ascending. Values are
+    sums of distances (count^2 times stagger^2). ``distance`` and ``own_variance`` hold
+    the usable parts, `part` their places in the tables.
+
+    Returns
+    -------
+    (kept_count, nodes, unclosed, leaves) : unclosed is the least sum that an
+    unvisited set can have if the node limit was hit, else -1.
+    """
+    parts = distance.shape[0]
+    capacity = kept_value.shape[0]
+    pairs_in_set = count * (count - 1) // 2
+    items = np.empty((count + 1, parts), np.int64)
+    keys = np.empty((count + 1, parts), np.float64)
+    sizes = np.zeros(count + 1, np.int64)
+    at = np.zeros(count + 1, np.int64)
+    sums = np.zeros(count + 1, np.float64)
+    owns = np.zeros(count + 1, np.float64)
+    members = np.zeros(count, np.int64)
+    actual = np.zeros(count, np.int64)
+    objective = np.empty(level.shape[0], np.float64)
+    nodes = 0
+    leaves = 0
+    limit = start_limit
+    if kept_count > 0:
+        limit = min(limit, kept_value[0] * margin)
+    least_own = own_variance.min()
+    if fixed_count > 0:
+        root = fixed_count
+        roots = 1
+        for m in range(fixed_count):
+            members[m] = m
+    else:
+        root = 2
+        roots = pair_first.shape[0]
+    for pair in range(roots):
+        key = -1
+        if fixed_count == 0:
+            i = pair_first[pair]
+            j = pair_second[pair]
+            members[0] = i
+            members[1] = j
+            closest = distance[i, j]
+            key = min(i, j) * parts + max(i, j)
+            if closest * pairs_in_set > limit:
+                break
+        else:
+            closest = 1e300
+            for m in range(parts):
+                for n in range(m):
+                    closest = min(closest, distance[m, n])
+        root_sum = 0.0
+        root_own = 0.0
+        for m in range(root):
+            root_own += own_variance[members[m]]
+            for n in range(m):
+                root_sum += distance[members[m], members[n]]
+        least = least_whole(root_sum, root_own, root, count, least_own)
+        if least > limit:
+            continue
+        if nodes > node_limit:
+            return kept_count, nodes, max(least, closest * pairs_in_set), leaves
+        left = count - root
+        size = 0
+        if left > 0:
+            rest = (left - 1) * root * closest + (left * (left - 1) // 2) * closest
+            for k in range(parts):
+                grown = 0.0
+                usable = True
+                for m in range(root):
+                    if members[m] == k or not after(distance, members[m], k, closest, key):
+                        usable = False
+                        break
+                    grown += distance[members[m], k]
+                if not usable or root_sum + grown + rest > limit:
+                    continue
+                items[root, size] = k
+                keys[root, size] = grown
+                size += 1
+            if size < left:
+                continue
+            sort_by(keys[root], items[root], 0, size)
+        sizes[root] = size
+        at[root] = 0
+        sums[root] = root_sum
+        owns[root] = root_own
+        depth = root
+        while depth >= root:
+            remaining = count - depth
+            if remaining > 0:
+                n = at[depth]
+                if n + remaining > sizes[depth]:
+                    depth -= 1
+                    continue
+                add = keys[depth, n]
+                bound = sums[depth] + remaining * add
+                bound += (remaining * (remaining - 1) // 2) * closest
+                if bound > limit:
+                    depth -= 1
+                    continue
+                at[depth] = n + 1
+                nodes += 1
+                if fixed_count > 0 and nodes > node_limit:
+                    return kept_count, nodes, least, leaves
+                k = items[depth, n]
+                members[depth] = k
+                total = sums[depth] + add
+                own_total = owns[depth] + own_variance[k]
+                if remaining > 1:
+                    if least_whole(total, own_total, depth + 1, count, least_own) > limit:
+                        continue
+                    left = remaining - 1
+                    rest = (left - 1) * (depth + 1) * closest
+                    rest += (left * (left - 1) // 2) * closest
+                    size = 0
+                    for m in range(n + 1, sizes[depth]):
+                        other = items[depth, m]
+                        grown = keys[depth, m] + distance[k, other]
+                        # the others of the set bring at least as many distances, each
+                        # at least the closest
+                        if total + grown + rest > limit:
+                            continue
+                        if (
+                            least_whole(
+                                total + grown,
+                                own_total + own_variance[other],
+                                depth + 2,
+                                count,
+                                least_own,
+                            )
+                            > limit
+                        ):
+                            continue
+                        if after(distance, k, other, closest, key):
+                            items[depth + 1, size] = other
+                            keys[depth + 1, size] = grown
+                            size += 1
+                    if size >= left:
+                        sort_by(keys[depth + 1], items[depth + 1], 0, size)
+                        sizes[depth + 1] = size
+                        at[depth + 1] = 0
+                        sums[depth + 1] = total
+                        owns[depth + 1] = own_total
+                        depth += 1
+                    continue
+                sums[count] = total
+            else:
+                depth = root - 1  # the root is a whole set: one leaf, then done
+            if sums[count] > limit:
+                continue
+            leaves += 1
+            ideal = 0.0
+            middle = 0.0
+            for m in range(count):
+                actual[m] = part[members[m]]
+                ideal += uniform_travel[actual[m]]
+                middle += uniform_place[actual[m]]
+            travel, stall = travel_and_stall(
+                level[place],
+                slope[place],
+                low[place],
+                high[place],
+                swing[place],
+                actual,
+                count,
+                targets,
+                band_low,
+                band_high,
+            )
+            if travel * count < travel_share * ideal:
+                continue
+            here = travel * (1.0 - stall)
+            probe = int(middle / count + 0.5)
+            there, lost = travel_and_stall(
+                level[probe],
+                slope[probe],
+                low[probe],
+                high[probe],
+                swing[probe],
+                actual,
+                count,
+                targets,
+                band_low,
+                band_high,
+            )
+            if there * (1.0 - lost) > here:
+                continue
+            own, _, _ = own_position(
+                level,
+                slope,
+                low,
+                high,
+                swing,
+                actual,
+                count,
+                targets,
+                band_low,
+                band_high,
+                objective,
+            )
+            if own != place:
+                continue
+            value = sums[count]
+            if kept_count == capacity and value >= kept_value[capacity - 1]:
+                continue
+            n = min(kept_count, capacity - 1)
+            while n > 0 and kept_value[n - 1] > value:
+                kept_value[n] = kept_value[n - 1]
+                kept_sets[n] = kept_sets[n - 1]
+                kept_place[n] = kept_place[n - 1]
+                n -= 1
+            kept_value[n] = value
+            for m in range(count):
+                kept_sets[n, m] = actual[m]
+            kept_place[n] = place
+            kept_count = min(kept_count + 1, capacity)
+            limit = min(limit, kept_value[0] * margin)
+    return kept_count, nodes, -1.0, leaves

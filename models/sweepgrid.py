@@ -1,0 +1,225 @@
+"""The circuit's gate sweep at a grid of trimmer positions, and the parts' octaves there.
+
+The search over sets needs every part's break frequency at every trimmer position
+that can be a set's own bias. One table holds them. A set's own bias on the grid is
+the position with the greatest travel x (1 - stall), both from the table: travel
+from the notch condition of equal-armed stages without feedback, which for like
+parts is also right with them (all notches then scale with the break frequency).
+The finalists of a search are judged from the full response, not from this table.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Protocol
+
+import numpy as np
+import numpy.typing as npt
+
+from .pairwise import Array, Cloud, Index, Octaves, Parts, cloud, octaves
+
+if TYPE_CHECKING:
+    from .circuit import Circuit
+    from .quantity import Setting
+
+GRID_POSITIONS = 96
+COARSE_POSITIONS = 49
+GRID_TIMES = 64
+HEARD_HZ = (20.0, 20e3)
+# Sets whose travel is under this share of a uniform set's rank after the others.
+TRAVEL_SHARE = 0.9
+
+
+class Bus(Protocol):
+    """What the grid needs of a gate bus wave."""
+
+    @property
+    def period_s(self) -> float:
+        """Period [s]."""
+        ...
+
+    @property
+    def low_v(self) -> float:
+        """Lowest gate-bus voltage from the reference rail [V]."""
+        ...
+
+    @property
+    def high_v(self) -> float:
+        """Highest gate-bus voltage from the reference rail [V]."""
+        ...
+
+    def gate_v(self, time_s: npt.ArrayLike) -> Array:
+        """Return the gate-bus voltage at these times [V]."""
+        ...
+
+
+def even_times(period_s: float, points: int) -> Array:
+    """Return `points` instants equally spaced over one period, shape (points,) [s]."""
+    return (np.arange(points) + 0.5) * (period_s / points)
+
+
+def notch_targets(stages: int) -> Array:
+    """Return the sums of the stages' arctangents at which the notches stand [rad].
+
+    The chain of N stages turns the phase by ``N pi - 2 sum atan(f/f_i)``; a notch
+    stands where that is an odd multiple of pi.
+    """
+    first = 0.5 if stages % 2 == 0 else 1.0
+    return (np.arange(stages // 2) + first) * math.pi
+
+
+@dataclass(frozen=True)
+class SweepGrid:
+    """Tables over Q trimmer positions, P parts and T instants.
+
+    Parameters
+    ----------
+    stages : int
+        Stages of the circuit.
+    position : ndarray, shape (Q,)
+        Trimmer positions, ascending.
+    swing_v : ndarray, shape (Q,)
+        Highest less lowest gate voltage [V].
+    parts : Parts
+        The parts.
+    level, slope, per_ln_beta : ndarray, shape (Q, P, T)
+        Octaves and slopes as in :class:`pairwise.Octaves`.
+    low, high : ndarray, shape (Q, P)
+        ``level`` at the lowest and highest gate voltage.
+    band : tuple of float
+        ``level`` that puts a break frequency at 20 Hz and at 20 kHz.
+    uniform_travel : ndarray, shape (P,)
+        Travel of a uniform set of each part at its own bias [octaves].
+    uniform_place : ndarray, shape (P,)
+        Index of that position.
+    """
+
+    stages: int
+    position: Array
+    swing_v: Array
+    parts: Parts
+    level: Array
+    slope: Array
+    per_ln_beta: Array
+    low: Array
+    high: Array
+    band: tuple[float, float]
+    uniform_travel: Array
+    uniform_place: Index
+
+    def cloud(self, place: int) -> Cloud:
+        """Return the parts as points at one position."""
+        swept = Octaves(self.level[place], self.slope[place], self.per_ln_beta[place])
+        return cloud(self.parts, swept, compact=True)
+
+    def own_bias(self, sets: npt.ArrayLike) -> tuple[Index, Array, Array, Array]:
+        """Return place, travel and stall (S,) and objective (S, Q) of sets (S, N) at own bias."""
+        from . import closing_kernels
+
+        members = np.ascontiguousarray(sets, dtype=np.int64)
+        count = members.shape[0]
+        places = np.zeros(count, np.int64)
+        travel, stall = np.zeros(count), np.zeros(count)
+        objective = np.zeros((count, self.position.size))
+        closing_kernels.own_positions(
+            *self.tables(), members, notch_targets(self.stages), *self.band,
+            places, travel, stall, objective,
+        )  # fmt: skip
+        return places, travel, stall, objective
+
+    def tables(self) -> tuple[Array, Array, Array, Array, Array]:
+        """Return the arrays the kernels read."""
+        return self.level, self.slope, self.low, self.high, self.swing_v
+
+
+def gate_share(circuit: Circuit) -> float:
+    """Share of the gate bus that reaches the gates, 1 without the half-drain network."""
+    return 1.0 - circuit.half_drain_share
+
+
+def build_grid(
+    parts: Parts,
+    circuit: Circuit,
+    rate: Setting,
+    *,
+    positions: int = GRID_POSITIONS,
+    bus_at: Callable[[float], Bus] | None = None,
+) -> SweepGrid:
+    """Tabulate the parts over the trimmer positions at which they can sweep.
+
+    A first coarse pass over the whole trimmer finds where any part travels at
+    least half as far as it can anywhere; the grid then covers that range.
+
+    Parameters
+    ----------
+    parts : Parts
+        P parts.
+    circuit : Circuit
+        The circuit; unequal shunts and capacitors enter by their geometric mean.
+    rate : Setting
+        The rate, which sets the gate wave.
+    positions : int
+        Positions of the grid.
+    bus_at : callable, optional
+        Trimmer position to gate-bus wave; solved from the circuit when left out.
+    """
+    if bus_at is None:
+        from .gatebus import solve_bus
+
+        def bus_at(position: float) -> Bus:
+            return solve_bus(circuit, position, rate)
+
+    share = gate_share(circuit)
+    shunt_s = 1.0 / _geometric_mean([stage.shunt_ohm for stage in circuit.stages])
+    capacitor_f = _geometric_mean([stage.capacitor_f for stage in circuit.stages])
+    band = (
+        math.log2(2.0 * math.pi * HEARD_HZ[0] * capacitor_f),
+        math.log2(2.0 * math.pi * HEARD_HZ[1] * capacitor_f),
+    )
+    factors = np.log2(np.tan(notch_targets(circuit.stage_count) / circuit.stage_count))
+
+    def extremes(at: Array) -> tuple[list[Bus], Array, Array]:
+        buses = [bus_at(float(position)) for position in at]
+        ends = share * np.array([[bus.low_v, bus.high_v] for bus in buses])
+        flat = octaves(parts, ends.ravel(), shunt_s).level.reshape(len(parts), -1, 2)
+        return buses, np.ascontiguousarray(flat[..., 0].T), np.ascontiguousarray(flat[..., 1].T)
+
+    def uniform(low: Array, high: Array) -> Array:
+        bottom = np.maximum(low[..., None] + factors, band[0])
+        top = np.minimum(high[..., None] + factors, band[1])
+        return np.asarray(np.maximum(top - bottom, 0.0).min(axis=-1))
+
+    coarse = np.linspace(0.0, 1.0, COARSE_POSITIONS)
+    _, low, high = extremes(coarse)
+    travel = uniform(low, high)
+    useful = np.flatnonzero((travel >= 0.5 * travel.max(axis=0)).any(axis=1))
+    start = coarse[max(useful[0] - 1, 0)]
+    stop = coarse[min(useful[-1] + 1, COARSE_POSITIONS - 1)]
+    position = np.linspace(start, stop, positions)
+    buses, low, high = extremes(position)
+    travel = uniform(low, high)
+    place = travel.argmax(axis=0)
+    swept = [
+        octaves(parts, share * bus.gate_v(even_times(bus.period_s, GRID_TIMES)), shunt_s)
+        for bus in buses
+    ]
+    return SweepGrid(
+        stages=circuit.stage_count,
+        position=position,
+        swing_v=share * np.array([bus.high_v - bus.low_v for bus in buses]),
+        parts=parts,
+        level=np.array([one.level for one in swept]),
+        slope=np.array([one.per_gate_v for one in swept]),
+        per_ln_beta=np.array([one.per_ln_beta for one in swept]),
+        low=low,
+        high=high,
+        band=band,
+        uniform_travel=travel[place, np.arange(len(parts))],
+        uniform_place=place,
+    )
+
+
+def _geometric_mean(values: list[float]) -> float:
+    return math.exp(math.fsum(math.log(value) for value in values) / len(values))
