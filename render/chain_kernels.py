@@ -53,6 +53,37 @@ TALLIES = 8
 COUNT_EVERY = 4
 
 
+@kernel(inline="always")
+def stage_map(v, u, source, past, bus, hb, lam, w, pw, keep, hs, hn, w0, soft, bent, half_drain):  # type: ignore[no-untyped-def]
+    """Return one stage linearised about ``v``: ``v_new = d x + alpha``, and the charge's bend.
+
+    ``u`` is the source-side overdrive without the drain's share, ``source`` its ``P^2``
+    (unused with the half-drain network, where both sides move with the drain).
+    """
+    pd, sd = positive(u - keep * v, w, pw, soft)
+    bend = -second(pd, sd, pw, soft)
+    if half_drain:
+        ps, ss = positive(u + (1.0 - keep) * v, w, pw, soft)
+        square = ps * ps - pd * pd
+        slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
+        share = 1.0 - keep
+        bend = keep * keep * bend + share * share * second(ps, ss, pw, soft)
+    else:
+        square = source - pd * pd
+        slope = 2.0 * pd * sd
+    if bent:
+        lin = 1.0 + lam * abs(v)
+        slope = lin * slope + (lam if v >= 0.0 else -lam) * square
+        square = lin * square
+    g = hb * square + hs * v
+    dg = hb * slope + hs
+    if half_drain:
+        g += hn * (v - bus)
+        dg += hn
+    d = 1.0 / (1.0 + w0 * dg)
+    return d, v - d * (v + w0 * g + past), hb * bend
+
+
 @cache
 def lane_kernel(
     stages: int, lanes: int, soft: bool, bent: bool, half_drain: bool, frm: int, passes: int
@@ -106,61 +137,73 @@ def lane_kernel(
             if n == first:
                 for i in range(OCH, SIZE):
                     work[i] = 0.0
-            # What the gate and the past settle: overdrive, source side, history, start.
+            for j in range(L):
+                work[OX + j] = x[n, j]
+                work[OY + j] = 0.0
+            # What the gate and the past settle, then every stage as an affine map of its
+            # input about a start extrapolated from the past, composed along the chain.
             for s in range(S):
+                hs, hn = stage[HSHUNT, s], stage[HNET, s]
+                a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
                 w1, w2, w3 = stage[W1, s], stage[W2, s], stage[W3, s]
                 for j in range(L):
                     i = s * L + j
-                    u = keep * gate[n, j] - work[OVC + i]
-                    work[OU + i] = u
+                    bus = gate[n, j]
+                    u = keep * bus - work[OVC + i]
+                    source = 0.0
                     if not half_drain:
                         p, _ = positive(u, work[OW + i], work[OPW + i], soft)
-                        work[OSRC + i] = p * p
+                        source = p * p
                     past = w1 * work[OG1 + i] + w2 * work[OG2 + i] + w3 * work[OG3 + i]
-                    work[OHIST + i] = work[OQ + i] + past
-                    work[OV + i] = (
-                        4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
-                    )
-            for turn in range(passes):
+                    past += work[OQ + i]
+                    v = 4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
+                    d, alpha, bend = stage_map(
+                        v, u, source, past, bus, work[OHB + i], work[OLAM + i], work[OW + i],
+                        work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
+                    )  # fmt: skip
+                    if passes == 2:
+                        work[OU + i] = u
+                        work[OSRC + i] = source
+                    work[OHIST + i] = past
+                    work[OV + i] = v
+                    work[OD + i] = d
+                    work[OALPHA + i] = alpha
+                    work[OBEND + i] = bend
+                    px = work[OX + j]
+                    work[OP + i] = px
+                    gain = a * d - b
+                    work[OX + j] = gain * px + a * alpha
+                    if feedback:
+                        qx = work[OY + j]
+                        work[OQQ + i] = qx
+                        work[OY + j] = gain * qx - c
+                if s == frm:
+                    for j in range(L):
+                        work[OF + j] = work[OX + j] / (1.0 - work[OY + j])
+            if passes == 2:
+                for s in range(S):
+                    for j in range(L):
+                        i = s * L + j
+                        xs = work[OP + i]
+                        if feedback:
+                            xs += work[OQQ + i] * work[OF + j]
+                        work[OV + i] = work[OD + i] * xs + work[OALPHA + i]
                 for j in range(L):
                     work[OX + j] = x[n, j]
                     work[OY + j] = 0.0
-                # Every stage as an affine map of its input, composed along the chain.
                 for s in range(S):
                     hs, hn = stage[HSHUNT, s], stage[HNET, s]
                     a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
                     for j in range(L):
                         i = s * L + j
-                        v = work[OV + i]
-                        u = work[OU + i]
-                        w, pw = work[OW + i], work[OPW + i]
-                        hb = work[OHB + i]
-                        pd, sd = positive(u - keep * v, w, pw, soft)
-                        if half_drain:
-                            ps, ss = positive(u + (1.0 - keep) * v, w, pw, soft)
-                            square = ps * ps - pd * pd
-                            slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
-                            bend = (1.0 - keep) * (1.0 - keep) * second(ps, ss, pw, soft)
-                            bend -= keep * keep * second(pd, sd, pw, soft)
-                        else:
-                            square = work[OSRC + i] - pd * pd
-                            slope = 2.0 * pd * sd
-                            bend = -second(pd, sd, pw, soft)
-                        if bent:
-                            lam = work[OLAM + i]
-                            lin = 1.0 + lam * abs(v)
-                            slope = lin * slope + (lam if v >= 0.0 else -lam) * square
-                            square = lin * square
-                        g = hb * square + hs * v
-                        dg = hb * slope + hs
-                        if half_drain:
-                            g += hn * (v - gate[n, j])
-                            dg += hn
-                        d = 1.0 / (1.0 + w0 * dg)
-                        alpha = v - d * (v + w0 * g + work[OHIST + i])
+                        d, alpha, bend = stage_map(
+                            work[OV + i], work[OU + i], work[OSRC + i], work[OHIST + i],
+                            gate[n, j], work[OHB + i], work[OLAM + i], work[OW + i],
+                            work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
+                        )  # fmt: skip
                         work[OD + i] = d
                         work[OALPHA + i] = alpha
-                        work[OBEND + i] = hb * bend
+                        work[OBEND + i] = bend
                         px = work[OX + j]
                         work[OP + i] = px
                         gain = a * d - b
@@ -172,38 +215,35 @@ def lane_kernel(
                     if s == frm:
                         for j in range(L):
                             work[OF + j] = work[OX + j] / (1.0 - work[OY + j])
-                if feedback:
-                    for j in range(L):
-                        work[OX + j] += work[OY + j] * work[OF + j]
-                last = turn == passes - 1
-                # Back into the stages; after the last pass the state moves on.
-                for s in range(S):
-                    w0 = stage[W0, s]
-                    per_w0 = 1.0 / w0
-                    for j in range(L):
-                        i = s * L + j
-                        xs = work[OP + i]
-                        if feedback:
-                            xs += work[OQQ + i] * work[OF + j]
-                        v = work[OD + i] * xs + work[OALPHA + i]
-                        if last:
-                            move = v - work[OV + i]
-                            work[OCH + j] = max(work[OCH + j], abs(move))
-                            if s > 0:
-                                work[OTOP + j] = max(work[OTOP + j], abs(xs))
-                            # The charge follows the law to second order about the start;
-                            # what the pass left out there always has one sign and would add up.
-                            g = (xs - v - work[OHIST + i]) * per_w0 + work[OBEND + i] * move * move
-                            work[OG3 + i] = work[OG2 + i]
-                            work[OG2 + i] = work[OG1 + i]
-                            work[OG1 + i] = g
-                            work[OQ + i] = work[OHIST + i] + w0 * g
-                            work[OV4 + i] = work[OV3 + i]
-                            work[OV3 + i] = work[OV2 + i]
-                            work[OV2 + i] = work[OV1 + i]
-                            work[OV1 + i] = v
-                        else:
-                            work[OV + i] = v
+            if feedback:
+                for j in range(L):
+                    work[OX + j] += work[OY + j] * work[OF + j]
+            # Back into the stages, and the state moves on.
+            for s in range(S):
+                w0 = stage[W0, s]
+                per_w0 = 1.0 / w0
+                for j in range(L):
+                    i = s * L + j
+                    xs = work[OP + i]
+                    if feedback:
+                        xs += work[OQQ + i] * work[OF + j]
+                    v = work[OD + i] * xs + work[OALPHA + i]
+                    move = v - work[OV + i]
+                    work[OCH + j] = max(work[OCH + j], abs(move))
+                    if s > 0:
+                        work[OTOP + j] = max(work[OTOP + j], abs(xs))
+                    # The charge follows the law to second order about the start; what the
+                    # pass left out there always has one sign and would add up.
+                    past = work[OHIST + i]
+                    g = (xs - v - past) * per_w0 + work[OBEND + i] * move * move
+                    work[OG3 + i] = work[OG2 + i]
+                    work[OG2 + i] = work[OG1 + i]
+                    work[OG1 + i] = g
+                    work[OQ + i] = past + w0 * g
+                    work[OV4 + i] = work[OV3 + i]
+                    work[OV3 + i] = work[OV2 + i]
+                    work[OV2 + i] = work[OV1 + i]
+                    work[OV1 + i] = v
             for j in range(L):
                 work[OTOP + j] = max(work[OTOP + j], abs(work[OX + j]))
             if n >= first:
@@ -312,21 +352,13 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
             for turn in range(most_passes):
                 for s in range(S):
                     u = keep * bus - lane[VC, s, j]
-                    lam, w, pw = lane[LAMBDA, s, j], lane[KNEE, s, j], lane[PER_KNEE, s, j]
-                    pd, sd = positive(u - keep * v[s], w, pw, soft)
-                    ps, ss = positive(u + (1.0 - keep) * v[s], w, pw, soft)
-                    lin = 1.0 + lam * abs(v[s])
-                    square = ps * ps - pd * pd
-                    slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
-                    hb = lane[HBETA, s, j]
-                    g = hb * lin * square + stage[HSHUNT, s] * v[s]
-                    dg = hb * lin * slope + stage[HSHUNT, s]
-                    if half_drain:
-                        g += stage[HNET, s] * (v[s] - bus)
-                        dg += stage[HNET, s]
-                    dg += hb * (lam if v[s] >= 0.0 else -lam) * square
-                    d[s] = 1.0 / (1.0 + stage[W0, s] * dg)
-                    alpha[s] = v[s] - d[s] * (v[s] + stage[W0, s] * g + hist[s])
+                    w, pw = lane[KNEE, s, j], lane[PER_KNEE, s, j]
+                    source = positive(u, w, pw, soft)[0] ** 2
+                    d[s], alpha[s], _ = stage_map(
+                        v[s], u, source, hist[s], bus, lane[HBETA, s, j], lane[LAMBDA, s, j], w,
+                        pw, keep, stage[HSHUNT, s], stage[HNET, s], stage[W0, s], soft, True,
+                        half_drain,
+                    )  # fmt: skip
                 if frm >= 0:
                     a0, b0 = rail_low, rail_high
                     miss = (
