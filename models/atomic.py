@@ -46,7 +46,7 @@ def atomic_path(target: str | Path) -> Iterator[Path]:
         in the block pass unchanged.
     """
     target = Path(target)
-    _refuse_unfit(target)
+    check_target(target)
     try:
         handle, name = tempfile.mkstemp(
             prefix=f".{target.stem[:_MAX_STEM]}.", suffix=f".part{target.suffix}", dir=target.parent
@@ -108,7 +108,20 @@ def explain_write_fault(fault: OSError, target: Path) -> InputError:
     return InputError(f"{target}: {reason}")
 
 
-def _refuse_unfit(target: Path) -> None:
+def check_target(target: Path) -> None:
+    """Refuse a target that cannot be made or replaced, before any work is done for it.
+
+    Parameters
+    ----------
+    target : Path
+        The file to be made or replaced.
+
+    Raises
+    ------
+    InputError
+        If the folder is missing, or if the target is a folder, a link, no ordinary
+        file or protected.
+    """
     folder = target.parent
     try:
         if not folder.is_dir():

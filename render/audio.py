@@ -19,7 +19,7 @@ import re
 import shutil
 import struct
 import tempfile
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from types import TracebackType
@@ -29,6 +29,7 @@ import numpy as np
 import numpy.typing as npt
 import soundfile
 
+from ..models.atomic import check_target, explain_write_fault
 from ..models.errors import InputError
 
 Samples = npt.NDArray[np.float64]
@@ -531,15 +532,20 @@ def check_output(
         With every fault found.
     """
     target = Path(path)
-    faults = []
+    if "\0" in str(target):
+        raise InputError(f"{str(target)!r}: not a possible file name; give another")
+    faults: list[str] = []
     if target.suffix.lower() != ".wav":
         faults.append(f"{target}: takes are written as WAV; give a name ending in .wav")
     try:
-        for file in (target, sidecar_path(target)):
-            faults += _file_faults(file, inputs, overwrite)
-        faults += _folder_faults(target)
-    except (OSError, ValueError) as fault:  # a name too long, or with a null character
-        faults.append(f"{target}: not a possible file name ({_reason(fault)}); give another")
+        found = _file_faults(target, inputs, overwrite)
+        faults += found or _file_faults(sidecar_path(target), inputs, overwrite)
+        if not faults:
+            # Asking for permission bits is not enough: read-only disks, quotas, root.
+            with tempfile.TemporaryFile(dir=target.parent):
+                pass
+    except OSError as fault:
+        faults += explain_write_fault(fault, target).messages
     if faults:
         raise InputError(faults)
     return target
@@ -631,12 +637,14 @@ def _ogg_is_whole(path: Path) -> bool:
     return len(page) >= 27 + segments + sum(page[27 : 27 + segments])
 
 
-def _file_faults(file: Path, inputs: Iterable[str | Path], overwrite: bool) -> list[str]:
-    if file.is_dir():
-        return [f"{file}: is a folder; give a file name"]
+def _file_faults(file: Path, inputs: Iterable[str | Path], overwrite: bool) -> Sequence[str]:
     for source in inputs:
         if _same_file(file, Path(source)):
             return [f"{file}: is the input {source} itself; give the output another name"]
+    try:
+        check_target(file)
+    except InputError as fault:
+        return fault.messages
     if os.path.lexists(file) and not overwrite:
         return [f"{file}: exists already; give another name, or allow overwriting it"]
     return []
@@ -647,21 +655,6 @@ def _same_file(one: Path, other: Path) -> bool:
         return one.samefile(other)
     except OSError:
         return os.path.realpath(one) == os.path.realpath(other)
-
-
-def _folder_faults(target: Path) -> list[str]:
-    folder = target.parent
-    if not folder.exists():
-        return [f"{target}: the folder {folder} does not exist; make it or give another"]
-    if not folder.is_dir():
-        return [f"{target}: {folder} is not a folder; give another"]
-    try:
-        # Asking for permission bits is not enough: read-only disks, quotas, root.
-        with tempfile.TemporaryFile(dir=folder):
-            pass
-    except OSError as fault:
-        return [f"{target}: cannot be written there ({_reason(fault)}); give another folder"]
-    return []
 
 
 def _clear_peak_stamp(path: Path) -> None:
