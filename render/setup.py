@@ -7,6 +7,7 @@ import json
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -171,9 +172,9 @@ def set_up(settings: TakeSettings, gate_trace: tuple[Array, float] | None = None
         bias = solve_bias(circuit, jfets, settings.rate)
         bus = bias.bus
     else:
-        position = trimmer_position(circuit, settings.trimmer)
+        position = trimmer_position(circuit, settings.trimmer, settings.rate)
         bus = solve_bus(circuit, position, settings.rate)
-    return Setup(settings, circuit, jfets, _bus_gate(bus), bus.low_v, bus.high_v, bus, bias)
+    return Setup(settings, circuit, jfets, bus.sample_gate, bus.low_v, bus.high_v, bus, bias)
 
 
 def changed_circuit(settings: TakeSettings) -> Circuit:
@@ -220,25 +221,22 @@ def plan_takes(setups: Sequence[Setup], sample_rate: float) -> list[EnginePlan]:
         key = (setup.circuit, setup.jfets)
         low, high = ranges.get(key, (math.inf, -math.inf))
         ranges[key] = (min(low, setup.gate_low_v), max(high, setup.gate_high_v))
-    plans = {key: plan_engine(*key, *span, sample_rate) for key, span in ranges.items()}
+    plans = {key: _plan(*key, *span, sample_rate) for key, span in ranges.items()}
     factor = max((plan.factor for plan in plans.values()), default=1)
     for key, plan in plans.items():
         if plan.factor < factor:
-            plans[key] = plan_engine(*key, *ranges[key], sample_rate, least_factor=factor)
+            plans[key] = _plan(*key, *ranges[key], sample_rate, least_factor=factor)
     return [plans[setup.circuit, setup.jfets] for setup in setups]
+
+
+# A plan costs trial runs; takes of one set at several rates or riffs share it.
+_plan = lru_cache(maxsize=64)(plan_engine)
 
 
 def circuit_hash(circuit: Circuit) -> str:
     """Return a hash of a circuit's values, hexadecimal; its name and description do not count."""
     values = circuit.model_dump(mode="json", exclude={"name", "about"})
     return hashlib.sha256(json.dumps(values, sort_keys=True).encode()).hexdigest()
-
-
-def _bus_gate(bus: BusWave) -> Gate:
-    def gate(start: int, count: int, rate_hz: float) -> Array:
-        return np.asarray(bus.gate_v((start + np.arange(count)) / rate_hz), float)
-
-    return gate
 
 
 def _trace_gate(trace: Array, trace_rate_hz: float) -> Gate:
@@ -248,7 +246,7 @@ def _trace_gate(trace: Array, trace_rate_hz: float) -> Gate:
         place = (start + np.arange(count)) * (trace_rate_hz / rate_hz)
         first = min(max(math.floor(place[0]), 0), len(trace) - 1)
         last = min(max(math.ceil(place[-1]), 0), len(trace) - 1) + 1
-        return np.interp(place, np.arange(first, last), trace[first:last])
+        return np.asarray(np.interp(place, np.arange(first, last), trace[first:last]), float)
 
     return gate
 

@@ -79,7 +79,7 @@ NOISE_BAND_HZ = (50.0, 12_000.0)
 
 def pitch_hz(note: int) -> float:
     """Return the equal-tempered frequency of a MIDI note number (A4 = 69 = 440 Hz)."""
-    return 440.0 * 2.0 ** ((note - 69) / 12.0)
+    return 440.0 * float(2.0 ** ((note - 69) / 12.0))
 
 
 def plucked_string(
@@ -130,7 +130,8 @@ def plucked_string(
     note = lfilter([1.0, c], denominator, burst)
     release = round(0.03 * SAMPLE_RATE_HZ)
     note[-release:] *= 0.5 + 0.5 * np.cos(np.pi * np.arange(release) / release)
-    return loudness * note / np.sqrt(np.mean(note[: 2 * whole] ** 2))
+    attack_rms = float(np.sqrt(np.mean(note[: 2 * whole] ** 2)))
+    return np.asarray(note, float) * (loudness / attack_rms)
 
 
 def riff_pluck() -> Array:
