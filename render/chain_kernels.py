@@ -47,29 +47,31 @@ HSHUNT, A, B, C, W0, W1, W2, W3, HNET = range(9)
 Q1, G1, G2, G3, V1, V2, V3, V4 = range(8)
 STATES = 8
 # Columns of `tally`, one row per lane
-GATE_SOURCE, GATE_DRAIN, LOW_INPUT, HIGH_INPUT, TOP, CHANGE, RAIL, STUCK = range(8)
-TALLIES = 8
+GATE_SOURCE, GATE_DRAIN, LOW_INPUT, HIGH_INPUT, TOP, CHANGE, BUS, RAIL, STUCK = range(9)
+TALLIES = 9
+# Steps between evaluations of the law's gate side in the fast loop with one pass.
+CARRY = 4
 # Junctions and plus inputs are looked at on every so many steps, and counted as often.
 COUNT_EVERY = 4
 
 
 @kernel(inline="always")
-def stage_map(v, u, source, past, bus, hb, lam, w, pw, keep, hs, hn, w0, soft, bent, half_drain):  # type: ignore[no-untyped-def]
+def stage_map(  # type: ignore[no-untyped-def]
+    v, pd, sd, source, ps, ss, past, bus, hb, lam, pw, keep, hs, hn, w0, soft, bent, half_drain
+):
     """Return one stage linearised about ``v``: ``v_new = d x + alpha``, and the charge's bend.
 
-    ``u`` is the source-side overdrive without the drain's share, ``source`` its ``P^2``
-    (unused with the half-drain network, where both sides move with the drain).
+    ``pd, sd`` are ``P`` and ``P'`` on the drain side, ``source`` is ``P^2`` on the source
+    side; ``ps, ss``, its ``P`` and ``P'``, count only with the half-drain network, where
+    both sides move with the drain.
     """
-    pd, sd = positive(u - keep * v, w, pw, soft)
     bend = -second(pd, sd, pw, soft)
+    square = source - pd * pd
     if half_drain:
-        ps, ss = positive(u + (1.0 - keep) * v, w, pw, soft)
-        square = ps * ps - pd * pd
-        slope = 2.0 * ((1.0 - keep) * ps * ss + keep * pd * sd)
         share = 1.0 - keep
+        slope = 2.0 * (share * ps * ss + keep * pd * sd)
         bend = keep * keep * bend + share * share * second(ps, ss, pw, soft)
     else:
-        square = source - pd * pd
         slope = 2.0 * pd * sd
     if bent:
         lin = 1.0 + lam * abs(v)
@@ -103,24 +105,31 @@ def lane_kernel(
 
     Notes
     -----
-    ``tally[:, TOP]`` receives the highest output magnitude and ``tally[:, CHANGE]`` the
-    largest correction of the last pass. What a pass leaves behind goes as the square of
+    ``tally[:, TOP]`` receives the highest output magnitude, ``tally[:, CHANGE]`` the
+    largest correction of the last pass and ``tally[:, BUS]`` the furthest the gate went
+    between evaluations of its side of the law. What a pass leaves behind goes as the square of
     its correction, so the caller can judge by them whether a lane must be done again.
     """
     S, L = stages, lanes
     SL = S * L
     # Offsets into the flat working memory: the state's rows come first, in their order.
     OQ, OG1, OG2, OG3, OV1, OV2, OV3, OV4 = (i * SL for i in range(STATES))
-    OHIST, OU, OSRC, OV, OD, OALPHA, OP, OQQ, OBEND = (i * SL for i in range(STATES, STATES + 9))
-    OVC, OHB, OLAM, OW, OPW = (i * SL for i in range(STATES + 9, STATES + 14))
-    OX = (STATES + 14) * SL  # per lane: composed constant
+    OHIST, OU, OSRC, OV, OD, OALPHA, OP, OQQ, OBEND, OPD, OSD, OPS, OSS, OU0 = (
+        i * SL for i in range(STATES, STATES + 14)
+    )
+    OVC, OHB, OLAM, OW, OPW = (i * SL for i in range(STATES + 14, STATES + 19))
+    OX = (STATES + 19) * SL  # per lane: composed constant
     OY = OX + L  # per lane: composed factor of the fed-back output
     OF = OY + L  # per lane: fed-back output
     OCH = OF + L
     OTOP = OCH + L
     OGS, OGD, OLO, OHI = (OTOP + (i + 1) * L for i in range(4))
-    SIZE = OHI + L
+    OBUS = OHI + L
+    SIZE = OBUS + L
     feedback = frm >= 0
+    # The gate moves slowly: its side of the law is evaluated now and then, and carried on
+    # by its second-order expansion in between. The caller's BUS_STEP_V bounds the step.
+    carried = soft and passes == 1 and not half_drain
 
     @kernel(boundscheck=False)
     def run(x, gate, out, lane, stage, state, first, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
@@ -137,70 +146,67 @@ def lane_kernel(
             if n == first:
                 for i in range(OCH, SIZE):
                     work[i] = 0.0
-            for j in range(L):
-                work[OX + j] = x[n, j]
-                work[OY + j] = 0.0
-            # What the gate and the past settle, then every stage as an affine map of its
-            # input about a start extrapolated from the past, composed along the chain.
+            # Start voltages, extrapolated; the law's two sides in loops of their own, short
+            # enough for several lanes' chains of dependent steps to overlap.
+            anchor = n % CARRY == 0
             for s in range(S):
-                hs, hn = stage[HSHUNT, s], stage[HNET, s]
-                a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
-                w1, w2, w3 = stage[W1, s], stage[W2, s], stage[W3, s]
                 for j in range(L):
                     i = s * L + j
-                    bus = gate[n, j]
-                    u = keep * bus - work[OVC + i]
-                    source = 0.0
-                    if not half_drain:
-                        p, _ = positive(u, work[OW + i], work[OPW + i], soft)
-                        source = p * p
-                    past = w1 * work[OG1 + i] + w2 * work[OG2 + i] + w3 * work[OG3 + i]
-                    past += work[OQ + i]
-                    v = 4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
-                    d, alpha, bend = stage_map(
-                        v, u, source, past, bus, work[OHB + i], work[OLAM + i], work[OW + i],
-                        work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
-                    )  # fmt: skip
-                    if passes == 2:
-                        work[OU + i] = u
-                        work[OSRC + i] = source
-                    work[OHIST + i] = past
-                    work[OV + i] = v
-                    work[OD + i] = d
-                    work[OALPHA + i] = alpha
-                    work[OBEND + i] = bend
-                    px = work[OX + j]
-                    work[OP + i] = px
-                    gain = a * d - b
-                    work[OX + j] = gain * px + a * alpha
-                    if feedback:
-                        qx = work[OY + j]
-                        work[OQQ + i] = qx
-                        work[OY + j] = gain * qx - c
-                if s == frm:
+                    work[OU + i] = keep * gate[n, j] - work[OVC + i]
+                    work[OV + i] = (
+                        4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
+                    )
+            if carried:
+                if anchor:
+                    for i in range(SL):
+                        u = work[OU + i]
+                        p, q = positive(u, work[OW + i], work[OPW + i], soft)
+                        work[OU0 + i] = u
+                        work[OPS + i] = p
+                        work[OSS + i] = q
+                else:
                     for j in range(L):
-                        work[OF + j] = work[OX + j] / (1.0 - work[OY + j])
-            if passes == 2:
-                for s in range(S):
-                    for j in range(L):
-                        i = s * L + j
-                        xs = work[OP + i]
-                        if feedback:
-                            xs += work[OQQ + i] * work[OF + j]
-                        work[OV + i] = work[OD + i] * xs + work[OALPHA + i]
+                        work[OBUS + j] = max(work[OBUS + j], abs(work[OU + j] - work[OU0 + j]))
+                for i in range(SL):
+                    step = work[OU + i] - work[OU0 + i]
+                    p, q = work[OPS + i], work[OSS + i]
+                    curve = second(p, q, work[OPW + i], soft)
+                    work[OSRC + i] = p * p + step * (2.0 * p * q + step * curve)
+            elif not half_drain:
+                for i in range(SL):
+                    p, q = positive(work[OU + i], work[OW + i], work[OPW + i], soft)
+                    work[OSRC + i] = p * p
+            for turn in range(passes):
+                if half_drain:
+                    for i in range(SL):
+                        u = work[OU + i] + (1.0 - keep) * work[OV + i]
+                        p, q = positive(u, work[OW + i], work[OPW + i], soft)
+                        work[OSRC + i] = p * p
+                        work[OPS + i] = p
+                        work[OSS + i] = q
+                for i in range(SL):
+                    u = work[OU + i] - keep * work[OV + i]
+                    p, q = positive(u, work[OW + i], work[OPW + i], soft)
+                    work[OPD + i] = p
+                    work[OSD + i] = q
                 for j in range(L):
                     work[OX + j] = x[n, j]
                     work[OY + j] = 0.0
+                # Every stage as an affine map of its input, composed along the chain.
                 for s in range(S):
                     hs, hn = stage[HSHUNT, s], stage[HNET, s]
                     a, b, c, w0 = stage[A, s], stage[B, s], stage[C, s], stage[W0, s]
+                    w1, w2, w3 = stage[W1, s], stage[W2, s], stage[W3, s]
                     for j in range(L):
                         i = s * L + j
+                        past = w1 * work[OG1 + i] + w2 * work[OG2 + i] + w3 * work[OG3 + i]
+                        past += work[OQ + i]
                         d, alpha, bend = stage_map(
-                            work[OV + i], work[OU + i], work[OSRC + i], work[OHIST + i],
-                            gate[n, j], work[OHB + i], work[OLAM + i], work[OW + i],
-                            work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
+                            work[OV + i], work[OPD + i], work[OSD + i], work[OSRC + i],
+                            work[OPS + i], work[OSS + i], past, gate[n, j], work[OHB + i],
+                            work[OLAM + i], work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
                         )  # fmt: skip
+                        work[OHIST + i] = past
                         work[OD + i] = d
                         work[OALPHA + i] = alpha
                         work[OBEND + i] = bend
@@ -215,6 +221,14 @@ def lane_kernel(
                     if s == frm:
                         for j in range(L):
                             work[OF + j] = work[OX + j] / (1.0 - work[OY + j])
+                if turn < passes - 1:
+                    for s in range(S):
+                        for j in range(L):
+                            i = s * L + j
+                            xs = work[OP + i]
+                            if feedback:
+                                xs += work[OQQ + i] * work[OF + j]
+                            work[OV + i] = work[OD + i] * xs + work[OALPHA + i]
             if feedback:
                 for j in range(L):
                     work[OX + j] += work[OY + j] * work[OF + j]
@@ -270,6 +284,7 @@ def lane_kernel(
             tally[j, HIGH_INPUT] += COUNT_EVERY * work[OHI + j]
             tally[j, TOP] = work[OTOP + j]
             tally[j, CHANGE] = work[OCH + j]
+            tally[j, BUS] = work[OBUS + j]
 
     return run, SIZE
 
@@ -353,11 +368,12 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                 for s in range(S):
                     u = keep * bus - lane[VC, s, j]
                     w, pw = lane[KNEE, s, j], lane[PER_KNEE, s, j]
-                    source = positive(u, w, pw, soft)[0] ** 2
+                    ps, ss = positive(u + (1.0 - keep) * v[s], w, pw, soft)
+                    pd, sd = positive(u - keep * v[s], w, pw, soft)
                     d[s], alpha[s], _ = stage_map(
-                        v[s], u, source, hist[s], bus, lane[HBETA, s, j], lane[LAMBDA, s, j], w,
-                        pw, keep, stage[HSHUNT, s], stage[HNET, s], stage[W0, s], soft, True,
-                        half_drain,
+                        v[s], pd, sd, ps * ps, ps, ss, hist[s], bus, lane[HBETA, s, j],
+                        lane[LAMBDA, s, j], pw, keep, stage[HSHUNT, s], stage[HNET, s],
+                        stage[W0, s], soft, True, half_drain,
                     )  # fmt: skip
                 if frm >= 0:
                     a0, b0 = rail_low, rail_high

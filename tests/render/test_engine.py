@@ -10,7 +10,7 @@ import pytest
 from scipy.signal import freqs_zpk
 from sweepset.models.circuit import load_circuit
 from sweepset.models.jfet import Jfet
-from sweepset.render.chain_kernels import TALLIES
+from sweepset.render.chain_kernels import STUCK, TALLIES
 from sweepset.render.engine import Engine, HighPass
 from sweepset.render.lanes import LaneRunner
 from sweepset.render.plan import plan_engine, ratio_db
@@ -93,7 +93,7 @@ def carefully(runner, x, gate):
     out = np.zeros_like(x)
     tally = np.zeros((runner.lanes, TALLIES))
     runner._carefully(np.arange(runner.lanes), x, gate, 0, out, tally)
-    assert tally[:, 7].sum() == 0
+    assert tally[:, STUCK].sum() == 0
     return out
 
 
@@ -141,8 +141,8 @@ def test_clipping_inside_the_loop_solves_the_loop_equation():
 
 def test_silence_gives_silence():
     out, report = render(np.zeros((RATE, 1)), parts())
-    # the two sides of the law cancel to rounding (a fused multiply-add rounds once less)
-    assert np.abs(out).max() < 1e-15
+    # what the source side's expansion between evaluations leaves: far below 24 bits' 6e-8
+    assert np.abs(out).max() < 1e-9
     assert report.warnings() == []
 
 
