@@ -210,7 +210,8 @@ def make_riff(name: str) -> Array:
     """
     samples = RIFFS[name][0]()
     samples -= samples.mean()
-    return (samples * (10.0 ** (PEAK_DBFS / 20.0) / np.max(np.abs(samples))))[:, None]
+    gain = 10.0 ** (PEAK_DBFS / 20.0) / float(np.max(np.abs(samples)))
+    return samples[:, None] * gain
 
 
 def main(folder: Path) -> None:
