@@ -38,8 +38,9 @@ Array = npt.NDArray[np.float64]
 # A junction is taken to conduct audibly above this forward voltage; silicon passes
 # about a microampere there (design rule of the trade, no published source).
 CONDUCTING_V = 0.5
-# The voltage error that the Newton passes may leave behind: -114 dB re 0.5 V.
-LEFT_OVER_V = 1e-6
+# The voltage error that the Newton passes may leave behind in the worst step, -94 dB re
+# 0.5 V; the charge is kept to the next order, so it does not add up.
+LEFT_OVER_V = 1e-5
 # The furthest the gate may go while its side of the law is carried on by expansion: the
 # third-order rest, (2 mV/knee)^3/6 of it, is worth less than a microvolt at the drain.
 BUS_STEP_V = 2e-3

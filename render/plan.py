@@ -141,7 +141,7 @@ def plan_engine(
                 break
         factor *= 2
     return EnginePlan(
-        factor, rules, _warm_up_steps(circuit, rules, rate), error_db, alias_db, radius
+        factor, rules, warm_up_steps(circuit, rules, rate), error_db, alias_db, radius
     )
 
 
@@ -179,7 +179,7 @@ def _conductance_ladder(circuit: Circuit, jfets: Sequence[Jfet], gate_high_v: fl
     return _fixed_conductance(circuit) + share[:, None] * most
 
 
-def _warm_up_steps(circuit: Circuit, rules: tuple[Rule, ...], rate_hz: float) -> int:
+def warm_up_steps(circuit: Circuit, rules: tuple[Rule, ...], rate_hz: float) -> int:
     """Return the steps after which the chain, channels off (slowest), has forgotten its state."""
     ladder = _fixed_conductance(circuit) / _capacitors(circuit) / rate_hz
     matrix = step_matrices(circuit, rules, ladder[None])[0]
@@ -262,7 +262,7 @@ class _Trial:
         while np.gcd(cycles, size) != 1:
             cycles += 2
         # The sine must have settled: what is left of its start would pass for aliases.
-        warm = _warm_up_steps(self.circuit, rules, rate)
+        warm = warm_up_steps(self.circuit, rules, rate)
         x = ALIAS_TONE_V * np.sin(2 * np.pi * cycles * np.arange(warm + size) / size)
         gates = np.linspace(self.low_v, self.high_v, TRIAL_LANES)
         block = np.repeat(x[:, None], TRIAL_LANES, axis=1)
