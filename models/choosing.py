@@ -18,7 +18,7 @@ import numpy as np
 from .closing import Search, search_sets
 from .errors import InputError, near_names
 from .expected import expected_stagger
-from .pairwise import Parts, parts_of
+from .pairwise import parts_of
 from .sweepgrid import TRAVEL_SHARE, SweepGrid, build_grid
 
 if TYPE_CHECKING:

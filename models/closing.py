@@ -17,12 +17,110 @@ from . import closing_kernels
 from .pairwise import Array, Cloud, Index
 from .sweepgrid import TRAVEL_SHARE, SweepGrid, notch_targets
 
-KEPT_SETS = 48
-NODE_LIMIT = 60_000_000
+KEPT_SETS = 24
+NODE_LIMIT = 20_000_000
 # All sets within 5 % of the best stagger on the grid are kept, so that what the
 # grid leaves out (fewer instants, stepped positions) cannot hide a better one.
 KEPT_MARGIN = 1.05
 _FOREVER = 1e300
+FIRST_BATCH = 64
+LAST_BATCH = 1 << 16
+UNCLOSED = 2
+
+
+class Walk:
+    """All sets whose sum of distances is within a limit, a batch at a time.
+
+    Parameters
+    ----------
+    distance : ndarray, shape (P, P)
+        Distances between all parts [octaves^2].
+    own_variance : ndarray, shape (P,)
+        Their share from each part's own uncertainty [octaves^2].
+    usable : ndarray of int
+        Parts that may stand in a set, ascending.
+    count : int
+        Parts in a set.
+    limit : float
+        Greatest sum of distances; later batches may ask for less [octaves^2].
+    fixed : int
+        The first so many of `usable` stand in every set.
+    price : ndarray, shape (P,), optional
+        Prices; sets that cost more than `price_limit` are left out.
+    price_limit : float
+        Greatest price of a set.
+
+    Attributes
+    ----------
+    nodes : int
+        Partial sets looked at so far.
+    unclosed : float
+        Least sum of a set left out at the node limit, infinite while none is.
+    """
+
+    def __init__(
+        self,
+        distance: Array,
+        own_variance: Array,
+        usable: Index,
+        count: int,
+        limit: float,
+        *,
+        fixed: int = 0,
+        price: Array | None = None,
+        price_limit: float = 0.0,
+    ) -> None:
+        self._usable = usable
+        self._distance = np.ascontiguousarray(distance[np.ix_(usable, usable)])
+        self._own = np.ascontiguousarray(own_variance[usable])
+        self._price = np.zeros(usable.size) if price is None else price[usable]
+        self._price_limit = price_limit
+        self._fixed = fixed
+        self._count = count
+        self._first, self._second = _pairs(self._distance, limit, count)
+        self._cursor = np.zeros(2 * count + 8, np.int64)
+        wide = (count + 1, usable.size)
+        self._state = (
+            np.zeros(wide, np.int64),
+            np.zeros(wide),
+            np.zeros(count + 1),
+            np.zeros(count + 1),
+            np.zeros(count + 1),
+            np.zeros(count, np.int64),
+        )
+        self._batch = FIRST_BATCH
+        self.unclosed = math.inf
+
+    @property
+    def nodes(self) -> int:
+        """Partial sets looked at so far."""
+        return int(self._cursor[2])
+
+    def next_sets(self, limit: float, node_limit: int) -> tuple[Index, Array] | None:
+        """Return the next sets (S, N) and their sums of distances (S,), or None at the end."""
+        if self._cursor[3]:
+            return None
+        sets = np.empty((self._batch, self._count), np.int64)
+        sums = np.empty(self._batch)
+        found = closing_kernels.visit_sets(
+            self._distance, self._own, self._first, self._second, self._fixed, self._count,
+            float(limit), self._price, self._price_limit, max(node_limit, 0), self._cursor,
+            *self._state, sets, sums,
+        )  # fmt: skip
+        self._batch = min(4 * self._batch, LAST_BATCH)
+        if self._cursor[3] == UNCLOSED:
+            self.unclosed = float(self._state[2][0])
+        return self._usable[sets[:found]], sums[:found].copy()
+
+
+def _pairs(distance: Array, limit: float, count: int) -> tuple[Index, Index]:
+    """Return the pairs that can be a set's closest, ascending by distance, then place."""
+    first, second = np.triu_indices(distance.shape[0], 1)
+    values = distance[first, second]
+    may = values * (count * (count - 1) // 2) <= limit
+    first, second, values = first[may], second[may], values[may]
+    order = np.argsort(values, kind="stable")
+    return first[order].astype(np.int64), second[order].astype(np.int64)
 
 
 @dataclass(frozen=True)
@@ -99,40 +197,38 @@ def _search(
     squares = count * count
     limit = _seed(grid, fixed, share)
     limit = _FOREVER if limit is None else limit * margin**2 * (1.0 + 1e-9)
-    value = np.full(keep, np.inf)
-    sets = np.zeros((keep, count), np.int64)
-    place = np.zeros(keep, np.int64)
-    kept = nodes = leaves = 0
+    value = np.empty(0)
+    sets = np.empty((0, count), np.int64)
+    place = np.empty(0, np.int64)
+    nodes = leaves = 0
     unclosed = np.inf
     for q in _promising_order(grid):
-        if kept:
-            limit = min(limit, value[0] * margin**2)
         points = grid.cloud(q)
         distance = points.distances()
         usable = _usable(grid, q, distance, limit, fixed, share)
         if usable.size < count:
             continue
-        inner = np.ascontiguousarray(distance[np.ix_(usable, usable)])
-        first, second = _pairs(inner, limit, count) if not fixed else (usable[:0], usable[:0])
-        own_value = np.full(keep, np.inf)
-        own_sets = np.zeros((keep, count), np.int64)
-        own_place = np.zeros(keep, np.int64)
-        own_kept, visited, left, whole = closing_kernels.close_position(
-            q, inner, points.own[usable], usable, first, second, fixed, count, *grid.tables(),
-            notch_targets(count), *grid.band, grid.uniform_travel,
-            grid.uniform_place.astype(float), share, float(limit), margin**2,
-            max(node_limit - nodes, 0), own_value, own_sets, own_place, 0,
-        )  # fmt: skip
-        nodes += visited
-        leaves += whole
-        if left >= 0.0:
-            unclosed = min(unclosed, left)
-        together = np.concatenate([value[:kept], own_value[:own_kept]])
-        rows = np.concatenate([sets[:kept], own_sets[:own_kept]])
-        spots = np.concatenate([place[:kept], own_place[:own_kept]])
-        order = np.argsort(together, kind="stable")[:keep]
-        kept = order.size
-        value[:kept], sets[:kept], place[:kept] = together[order], rows[order], spots[order]
+        walk = Walk(distance, points.own, usable, count, limit, fixed=fixed)
+        while (batch := walk.next_sets(limit, node_limit - nodes)) is not None:
+            found, sums = batch
+            leaves += sums.size
+            yes = np.zeros(sums.size, np.bool_)
+            closing_kernels.at_own_bias(
+                q, found, *grid.tables(), notch_targets(count), *grid.band,
+                grid.uniform_travel, grid.uniform_place.astype(float), share, yes,
+            )  # fmt: skip
+            value = np.concatenate([value, sums[yes]])
+            sets = np.concatenate([sets, found[yes]])
+            place = np.concatenate([place, np.full(int(yes.sum()), q)])
+            order = np.argsort(value, kind="stable")[:keep]
+            value, sets, place = value[order], sets[order], place[order]
+            if value.size:
+                limit = min(limit, float(value[0]) * margin**2 * (1.0 + 1e-9))
+            if value.size == keep:  # only what betters the last one kept is of interest
+                limit = min(limit, float(value[-1]))
+        nodes += walk.nodes
+        unclosed = min(unclosed, walk.unclosed)
+    kept = value.size
     if kept:
         within = value[:kept] <= value[0] * margin**2
         bound = value[kept - 1] if kept == keep else value[0] * margin**2
@@ -181,16 +277,6 @@ def _usable(
             return np.arange(0)
         usable[:fixed] = True
     return np.flatnonzero(usable)
-
-
-def _pairs(distance: Array, limit: float, count: int) -> tuple[Index, Index]:
-    """Return the pairs that can be a set's closest, ascending by distance, then place."""
-    first, second = np.triu_indices(distance.shape[0], 1)
-    values = distance[first, second]
-    may = values * (count * (count - 1) // 2) <= limit
-    first, second, values = first[may], second[may], values[may]
-    order = np.argsort(values, kind="stable")
-    return first[order].astype(np.int64), second[order].astype(np.int64)
 
 
 def _seed(grid: SweepGrid, fixed: int, share: float) -> float | None:

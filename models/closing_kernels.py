@@ -204,106 +204,111 @@ def least_whole(pair_sum: float, own_sum: float, size: int, count: int, least_ow
 
 
 @kernel()
-def close_position(
-    place: int,
+def visit_sets(
     distance: Any,
     own_variance: Any,
-    part: Any,
     pair_first: Any,
     pair_second: Any,
     fixed_count: int,
     count: int,
-    level: Any,
-    slope: Any,
-    low: Any,
-    high: Any,
-    swing: Any,
-    targets: Any,
-    band_low: float,
-    band_high: float,
-    uniform_travel: Any,
-    uniform_place: Any,
-    travel_share: float,
-    start_limit: float,
-    margin: float,
+    limit: float,
+    price: Any,
+    price_limit: float,
     node_limit: int,
-    kept_value: Any,
-    kept_sets: Any,
-    kept_place: Any,
-    kept_count: int,
-) -> tuple[int, int, float, int]:
-    """Visit every set that may be as good as the best so far, with this place as its own bias.
+    cursor: Any,
+    items: Any,
+    keys: Any,
+    sums: Any,
+    owns: Any,
+    prices: Any,
+    members: Any,
+    found_sets: Any,
+    found_sums: Any,
+) -> int:
+    """Fill `found_sets` with the next sets whose sum of distances is at most `limit`.
 
     Sets grow from their closest pair, taken in ascending distance; all other pairs
     of the set then come after it, which gives each set one path and bounds what
     is still to be added. With `fixed_count` parts fixed (the first of the list),
-    sets grow from those. ``kept_*`` hold the best sets so far, ascending. Values are
-    sums of distances (count^2 times stagger^2). ``distance`` and ``own_variance`` hold
-    the usable parts, `part` their places in the tables.
+    sets grow from those. Sets whose prices add up to more than `price_limit` are
+    left out. The walk stops when `found_sets` is full and goes on at the next call,
+    whose limits may be lower; its state is in ``cursor`` (root, depth, nodes, end)
+    and the arrays after it. ``cursor[3]`` becomes 1 at the end of the walk, 2 at the
+    node limit; ``sums[0]`` then holds the least sum an unvisited set can have.
 
     Returns
     -------
-    (kept_count, nodes, unclosed, leaves) : unclosed is the least sum that an
-    unvisited set can have if the node limit was hit, else -1.
+    int
+        Sets found, up to ``found_sets.shape[0]``.
     """
     parts = distance.shape[0]
-    capacity = kept_value.shape[0]
     pairs_in_set = count * (count - 1) // 2
-    items = np.empty((count + 1, parts), np.int64)
-    keys = np.empty((count + 1, parts), np.float64)
-    sizes = np.zeros(count + 1, np.int64)
-    at = np.zeros(count + 1, np.int64)
-    sums = np.zeros(count + 1, np.float64)
-    owns = np.zeros(count + 1, np.float64)
-    members = np.zeros(count, np.int64)
-    actual = np.zeros(count, np.int64)
-    objective = np.empty(level.shape[0], np.float64)
-    nodes = 0
-    leaves = 0
-    limit = start_limit
-    if kept_count > 0:
-        limit = min(limit, kept_value[0] * margin)
+    sizes = cursor[4 : 4 + count + 1]
+    at = cursor[5 + count : 5 + count + count + 1]
     least_own = own_variance.min()
+    least_price = price.min()
+    root = fixed_count if fixed_count > 0 else 2
+    roots = 1 if fixed_count > 0 else pair_first.shape[0]
+    found = 0
+    key = -1
+    closest = 0.0
     if fixed_count > 0:
-        root = fixed_count
-        roots = 1
-        for m in range(fixed_count):
-            members[m] = m
-    else:
-        root = 2
-        roots = pair_first.shape[0]
-    for pair in range(roots):
-        key = -1
-        if fixed_count == 0:
-            i = pair_first[pair]
-            j = pair_second[pair]
-            members[0] = i
-            members[1] = j
-            closest = distance[i, j]
-            key = min(i, j) * parts + max(i, j)
-            if closest * pairs_in_set > limit:
-                break
-        else:
-            closest = 1e300
-            for m in range(parts):
-                for n in range(m):
-                    closest = min(closest, distance[m, n])
-        root_sum = 0.0
-        root_own = 0.0
-        for m in range(root):
-            root_own += own_variance[members[m]]
+        closest = 1e300
+        for m in range(parts):
             for n in range(m):
-                root_sum += distance[members[m], members[n]]
-        least = least_whole(root_sum, root_own, root, count, least_own)
-        if least > limit:
-            continue
-        if nodes > node_limit:
-            return kept_count, nodes, max(least, closest * pairs_in_set), leaves
-        left = count - root
-        size = 0
-        if left > 0:
+                closest = min(closest, distance[m, n])
+    while True:
+        depth = cursor[1]
+        if depth < root:
+            # ---- the next root
+            pair = cursor[0]
+            if pair >= roots:
+                cursor[3] = 1
+                return found
+            cursor[0] = pair + 1
+            if fixed_count == 0:
+                members[0] = pair_first[pair]
+                members[1] = pair_second[pair]
+                closest = distance[members[0], members[1]]
+                key = min(members[0], members[1]) * parts + max(members[0], members[1])
+                if closest * pairs_in_set > limit:
+                    cursor[3] = 1
+                    return found
+            else:
+                for m in range(fixed_count):
+                    members[m] = m
+            root_sum = 0.0
+            root_own = 0.0
+            root_price = 0.0
+            for m in range(root):
+                root_own += own_variance[members[m]]
+                root_price += price[members[m]]
+                for n in range(m):
+                    root_sum += distance[members[m], members[n]]
+            least = least_whole(root_sum, root_own, root, count, least_own)
+            if least > limit:
+                continue
+            if cursor[2] > node_limit:
+                cursor[3] = 2
+                sums[0] = max(least, closest * pairs_in_set)
+                return found
+            left = count - root
+            if root_price + left * least_price > price_limit:
+                continue
+            if left == 0:
+                for m in range(count):
+                    found_sets[found, m] = members[m]
+                found_sums[found] = root_sum
+                found += 1
+                if found == found_sets.shape[0]:
+                    return found
+                continue
+            size = 0
             rest = (left - 1) * root * closest + (left * (left - 1) // 2) * closest
+            rest_price = root_price + (left - 1) * least_price
             for k in range(parts):
+                if rest_price + price[k] > price_limit:
+                    continue
                 grown = 0.0
                 usable = True
                 for m in range(root):
@@ -319,139 +324,147 @@ def close_position(
             if size < left:
                 continue
             sort_by(keys[root], items[root], 0, size)
-        sizes[root] = size
-        at[root] = 0
-        sums[root] = root_sum
-        owns[root] = root_own
-        depth = root
-        while depth >= root:
-            remaining = count - depth
-            if remaining > 0:
-                n = at[depth]
-                if n + remaining > sizes[depth]:
-                    depth -= 1
-                    continue
-                add = keys[depth, n]
-                bound = sums[depth] + remaining * add
-                bound += (remaining * (remaining - 1) // 2) * closest
-                if bound > limit:
-                    depth -= 1
-                    continue
-                at[depth] = n + 1
-                nodes += 1
-                if fixed_count > 0 and nodes > node_limit:
-                    return kept_count, nodes, least, leaves
-                k = items[depth, n]
-                members[depth] = k
-                total = sums[depth] + add
-                own_total = owns[depth] + own_variance[k]
-                if remaining > 1:
-                    if least_whole(total, own_total, depth + 1, count, least_own) > limit:
-                        continue
-                    left = remaining - 1
-                    rest = (left - 1) * (depth + 1) * closest
-                    rest += (left * (left - 1) // 2) * closest
-                    size = 0
-                    for m in range(n + 1, sizes[depth]):
-                        other = items[depth, m]
-                        grown = keys[depth, m] + distance[k, other]
-                        # the others of the set bring at least as many distances, each
-                        # at least the closest
-                        if total + grown + rest > limit:
-                            continue
-                        if (
-                            least_whole(
-                                total + grown,
-                                own_total + own_variance[other],
-                                depth + 2,
-                                count,
-                                least_own,
-                            )
-                            > limit
-                        ):
-                            continue
-                        if after(distance, k, other, closest, key):
-                            items[depth + 1, size] = other
-                            keys[depth + 1, size] = grown
-                            size += 1
-                    if size >= left:
-                        sort_by(keys[depth + 1], items[depth + 1], 0, size)
-                        sizes[depth + 1] = size
-                        at[depth + 1] = 0
-                        sums[depth + 1] = total
-                        owns[depth + 1] = own_total
-                        depth += 1
-                    continue
-                sums[count] = total
-            else:
-                depth = root - 1  # the root is a whole set: one leaf, then done
-            if sums[count] > limit:
+            sizes[root] = size
+            at[root] = 0
+            sums[root] = root_sum
+            owns[root] = root_own
+            prices[root] = root_price
+            cursor[1] = root
+            continue
+        if fixed_count == 0:
+            closest = distance[members[0], members[1]]
+            key = min(members[0], members[1]) * parts + max(members[0], members[1])
+        # ---- one step deeper, sideways or back
+        remaining = count - depth
+        n = at[depth]
+        if n + remaining > sizes[depth]:
+            cursor[1] = depth - 1
+            continue
+        add = keys[depth, n]
+        bound = sums[depth] + remaining * add + (remaining * (remaining - 1) // 2) * closest
+        if bound > limit:
+            cursor[1] = depth - 1
+            continue
+        at[depth] = n + 1
+        cursor[2] += 1
+        if fixed_count > 0 and cursor[2] > node_limit:
+            cursor[3] = 2
+            sums[0] = least_whole(sums[root], owns[root], root, count, least_own)
+            return found
+        k = items[depth, n]
+        members[depth] = k
+        total = sums[depth] + add
+        total_price = prices[depth] + price[k]
+        if remaining == 1:
+            if total_price <= price_limit:
+                for m in range(count):
+                    found_sets[found, m] = members[m]
+                found_sums[found] = total
+                found += 1
+                if found == found_sets.shape[0]:
+                    return found
+            continue
+        own_total = owns[depth] + own_variance[k]
+        if least_whole(total, own_total, depth + 1, count, least_own) > limit:
+            continue
+        left = remaining - 1
+        if total_price + left * least_price > price_limit:
+            continue
+        # the others of the set bring at least as many distances, each at least the closest
+        rest = (left - 1) * (depth + 1) * closest + (left * (left - 1) // 2) * closest
+        rest_price = total_price + (left - 1) * least_price
+        size = 0
+        for m in range(n + 1, sizes[depth]):
+            other = items[depth, m]
+            grown = keys[depth, m] + distance[k, other]
+            if total + grown + rest > limit or rest_price + price[other] > price_limit:
                 continue
-            leaves += 1
-            ideal = 0.0
-            middle = 0.0
-            for m in range(count):
-                actual[m] = part[members[m]]
-                ideal += uniform_travel[actual[m]]
-                middle += uniform_place[actual[m]]
-            travel, stall = travel_and_stall(
-                level[place],
-                slope[place],
-                low[place],
-                high[place],
-                swing[place],
-                actual,
-                count,
-                targets,
-                band_low,
-                band_high,
-            )
-            if travel * count < travel_share * ideal:
+            own_there = own_total + own_variance[other]
+            if least_whole(total + grown, own_there, depth + 2, count, least_own) > limit:
                 continue
-            here = travel * (1.0 - stall)
-            probe = int(middle / count + 0.5)
-            there, lost = travel_and_stall(
-                level[probe],
-                slope[probe],
-                low[probe],
-                high[probe],
-                swing[probe],
-                actual,
-                count,
-                targets,
-                band_low,
-                band_high,
-            )
-            if there * (1.0 - lost) > here:
-                continue
-            own, _, _ = own_position(
-                level,
-                slope,
-                low,
-                high,
-                swing,
-                actual,
-                count,
-                targets,
-                band_low,
-                band_high,
-                objective,
-            )
-            if own != place:
-                continue
-            value = sums[count]
-            if kept_count == capacity and value >= kept_value[capacity - 1]:
-                continue
-            n = min(kept_count, capacity - 1)
-            while n > 0 and kept_value[n - 1] > value:
-                kept_value[n] = kept_value[n - 1]
-                kept_sets[n] = kept_sets[n - 1]
-                kept_place[n] = kept_place[n - 1]
-                n -= 1
-            kept_value[n] = value
-            for m in range(count):
-                kept_sets[n, m] = actual[m]
-            kept_place[n] = place
-            kept_count = min(kept_count + 1, capacity)
-            limit = min(limit, kept_value[0] * margin)
-    return kept_count, nodes, -1.0, leaves
+            if after(distance, k, other, closest, key):
+                items[depth + 1, size] = other
+                keys[depth + 1, size] = grown
+                size += 1
+        if size >= left:
+            sort_by(keys[depth + 1], items[depth + 1], 0, size)
+            sizes[depth + 1] = size
+            at[depth + 1] = 0
+            sums[depth + 1] = total
+            owns[depth + 1] = own_total
+            prices[depth + 1] = total_price
+            cursor[1] = depth + 1
+
+
+@kernel()
+def at_own_bias(
+    place: int,
+    sets: Any,
+    level: Any,
+    slope: Any,
+    low: Any,
+    high: Any,
+    swing: Any,
+    targets: Any,
+    band_low: float,
+    band_high: float,
+    uniform_travel: Any,
+    uniform_place: Any,
+    travel_share: float,
+    yes: Any,
+) -> None:
+    """Fill `yes` (sets,): full travel at this grid position, and it is the set's own bias."""
+    count = sets.shape[1]
+    objective = np.empty(level.shape[0], np.float64)
+    for s in range(sets.shape[0]):
+        members = sets[s]
+        yes[s] = False
+        ideal = 0.0
+        middle = 0.0
+        for m in range(count):
+            ideal += uniform_travel[members[m]]
+            middle += uniform_place[members[m]]
+        travel, stall = travel_and_stall(
+            level[place],
+            slope[place],
+            low[place],
+            high[place],
+            swing[place],
+            members,
+            count,
+            targets,
+            band_low,
+            band_high,
+        )
+        if travel * count < travel_share * ideal:
+            continue
+        # a quick refusal: the bias of the mean part's uniform set is better
+        probe = int(middle / count + 0.5)
+        there, lost = travel_and_stall(
+            level[probe],
+            slope[probe],
+            low[probe],
+            high[probe],
+            swing[probe],
+            members,
+            count,
+            targets,
+            band_low,
+            band_high,
+        )
+        if there * (1.0 - lost) > travel * (1.0 - stall):
+            continue
+        own, _, _ = own_position(
+            level,
+            slope,
+            low,
+            high,
+            swing,
+            members,
+            count,
+            targets,
+            band_low,
+            band_high,
+            objective,
+        )
+        yes[s] = own == place
