@@ -73,27 +73,27 @@ def overdrive_slope(x_v: ArrayLike, knee_v: ArrayLike) -> Array:
     return np.where(w > 0.0, soft, (x > 0.0).astype(float))
 
 
-def overdrive_inverse(p_v: float, knee_v: float) -> float:
+def overdrive_inverse(p_v: ArrayLike, knee_v: ArrayLike) -> Array:
     """Return ``x`` with ``P(x) = p``.
 
     Parameters
     ----------
-    p_v : float
-        Softened overdrive, more than 0 [V].
-    knee_v : float
-        Knee width, 0 or more [V].
+    p_v : array_like
+        Softened overdrive, more than 0, any shape [V].
+    knee_v : array_like
+        Knee width, broadcast against `p_v`, 0 or more [V].
 
     Raises
     ------
     ValueError
-        If `p_v` is not positive.
+        If any of `p_v` is not positive.
     """
-    if not p_v > 0.0:
+    p, w = np.broadcast_arrays(np.asarray(p_v, float), np.asarray(knee_v, float))
+    if not np.all(p > 0.0):
         raise ValueError(f"softened overdrive must be positive, got {p_v}")
-    if knee_v == 0.0:
-        return p_v
+    safe = np.where(w > 0.0, w, 1.0)
     # x = w ln(exp(p/w) - 1), arranged so that neither end overflows.
-    return p_v + knee_v * math.log(-math.expm1(-p_v / knee_v))
+    return np.asarray(np.where(w > 0.0, p + safe * np.log(-np.expm1(-p / safe)), p))
 
 
 def drain_current(

@@ -81,7 +81,7 @@ def explain_faults(fault: ValidationError, source: str, model: type[BaseModel]) 
         elif kind == "missing":
             text = "missing; this key is needed"
         elif kind == "union_tag_not_found":
-            text = "missing its key 'kind'; " + str(error["ctx"].get("discriminator", ""))
+            text = f"needs the key {error['ctx']['discriminator']}, which tells its kind"
         elif kind == "union_tag_invalid":
             context = error["ctx"]
             text = f"kind = {context['tag']!r} is not known; expected {context['expected_tags']}"
