@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import numpy as np
 import pytest
 from sweepset.models.circuit import load_circuit
 from sweepset.models.errors import InputError
@@ -71,6 +72,16 @@ def test_parts_are_warmed() -> None:
     warm = set_up(settings(celsius=40.0))
     assert warm.jfets == tuple(part.at_celsius(40.0) for part in PARTS)
     assert warm.settings.jfets == PARTS
+
+
+def test_the_gate_before_the_first_frame_is_the_bus_before_time_zero() -> None:
+    # The engine warms its slices up over frames before the first; the bus is periodic there too.
+    setup = set_up(settings())
+    assert setup.bus is not None
+    steps = np.arange(-5000, 5000)
+    found = setup.gate(-5000, 10_000, 192_000.0)
+    assert np.allclose(found, setup.bus.gate_v(steps / 192_000.0), atol=1e-9)
+    assert setup.gate_low_v - 1e-9 <= found.min() <= found.max() <= setup.gate_high_v + 1e-9
 
 
 def test_labels_of_nameless_parts() -> None:
