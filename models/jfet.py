@@ -269,6 +269,13 @@ class Jfet:
         """Return the small-signal channel conductance at zero drain voltage [S]."""
         return self.output_conductance(gate_v, 0.0)
 
+    def channel_conductance_slope(self, gate_v: ArrayLike) -> Array:
+        """Return the slope of the channel conductance with gate voltage at zero drain [S/V]."""
+        u = np.asarray(gate_v, float) - self.cutoff_v
+        p, slope = overdrive(u, self.knee_v), overdrive_slope(u, self.knee_v)
+        bend = slope * (1.0 - slope) / self.knee_v if self.knee_v > 0.0 else 0.0
+        return np.asarray(2.0 * self.beta_a_per_v2 * (slope**2 + p * bend))
+
     def channel_resistance(self, gate_v: ArrayLike) -> Array:
         """Return the small-signal channel resistance at zero drain voltage [ohm].
 

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from ..models.chain import net_conductance_s
 from ..models.circuit import Circuit
 from ..models.jfet import Jfet
 from .chain_kernels import (
@@ -231,9 +232,3 @@ class LaneRunner:
                 CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
                 *self.rails, tally,
             )  # fmt: skip
-
-
-def net_conductance_s(circuit: Circuit) -> float:
-    """Conductance from each drain to the gate bus through the half-drain network [S]."""
-    network = circuit.bus.half_drain
-    return 0.0 if network is None else 1.0 / (network.from_bus_ohm + network.from_drain_ohm)

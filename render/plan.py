@@ -22,9 +22,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from ..models.chain import capacitors_f, fixed_conductance_s
 from ..models.circuit import Circuit
 from ..models.jfet import Jfet
-from .lanes import LaneRunner, net_conductance_s
+from .lanes import LaneRunner
 from .rules import (
     ADAMS_3,
     ADAMS_4,
@@ -160,7 +161,7 @@ def choose_rules(
         The engine's rate [Hz].
     """
     conductances = _conductance_ladder(circuit, jfets, gate_high_v)
-    step_rates = conductances / _capacitors(circuit) / rate_hz
+    step_rates = conductances / capacitors_f(circuit) / rate_hz
     for best in (ADAMS_4, ADAMS_3, TRAPEZOIDAL):
         rules = rules_by_rate(step_rates[-1], best)
         radius = spectral_radius(step_matrices(circuit, rules, step_rates))
@@ -176,25 +177,15 @@ def _conductance_ladder(circuit: Circuit, jfets: Sequence[Jfet], gate_high_v: fl
         [float(part.output_conductance(keep * gate_high_v, -DRAIN_PULL_V)) for part in jfets]
     )
     share = np.concatenate([[0.0], np.geomspace(1e-4, 1.0, STABILITY_STEPS - 1)])
-    return _fixed_conductance(circuit) + share[:, None] * most
+    return fixed_conductance_s(circuit) + share[:, None] * most
 
 
 def warm_up_steps(circuit: Circuit, rules: tuple[Rule, ...], rate_hz: float) -> int:
     """Return the steps after which the chain, channels off (slowest), has forgotten its state."""
-    ladder = _fixed_conductance(circuit) / _capacitors(circuit) / rate_hz
+    ladder = fixed_conductance_s(circuit) / capacitors_f(circuit) / rate_hz
     matrix = step_matrices(circuit, rules, ladder[None])[0]
     steps = steps_to_forget(matrix, FORGOTTEN)
     return int(rate_hz) if steps is None else steps
-
-
-def _capacitors(circuit: Circuit) -> Array:
-    return np.array([stage.capacitor_f for stage in circuit.stages])
-
-
-def _fixed_conductance(circuit: Circuit) -> Array:
-    """Return what each plus input sees besides the channel, (stages,) [S]."""
-    shunts = np.array([1.0 / stage.shunt_ohm for stage in circuit.stages])
-    return shunts + net_conductance_s(circuit)
 
 
 class _Trial:
