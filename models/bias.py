@@ -21,6 +21,7 @@ from .cycle import (
     least_travel,
     mean_part,
     notch_travels,
+    octave_slopes,
     stopped_stages,
 )
 from .gatebus import BusWave, solve_bus
@@ -141,6 +142,10 @@ class BiasSearch:
         low = min(bus.low_v for bus in ends)
         high = max(bus.high_v for bus in ends)
         self._table = NotchTable(circuit, jfets, low, high)
+        # Slopes and mean track bend no more than the notches do: the same grid serves.
+        grid = self._table.gate_v
+        self._slopes = octave_slopes(circuit, jfets, grid)
+        self._mean_track = np.log2(set_break_hz(circuit, jfets, grid)).mean(axis=1)
 
     def objective(self, position: float) -> float:
         """Return travel times (1 - stall) at a trimmer position of 0 to 1 [octaves]."""
@@ -149,7 +154,10 @@ class BiasSearch:
         if travel == 0.0:
             return 0.0
         gate_v = bus.gate_v(np.arange(POINTS) * (bus.period_s / POINTS))
-        stopped = stopped_stages(self._circuit, self._jfets, gate_v, bus.high_v - bus.low_v)
+        grid = self._table.gate_v
+        slopes = np.stack([np.interp(gate_v, grid, row) for row in self._slopes.T], axis=-1)
+        mean_track = np.interp(gate_v, grid, self._mean_track)
+        stopped = stopped_stages(slopes, mean_track, bus.high_v - bus.low_v)
         return travel * (1.0 - float(stopped.any(axis=1).mean()))
 
     def best(self) -> tuple[float, float]:

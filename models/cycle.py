@@ -132,7 +132,9 @@ def analyse_cycle(circuit: Circuit, jfets: Sequence[Jfet], bus: Bus, points: int
     reference = set_break_hz(circuit, [mean_part(jfets)] * len(jfets), gate_v)
     notch_hz, notch_db = find_notches(circuit, breaks)
     travels = notch_travels(np.log2(notch_hz))
-    stopped = stopped_stages(circuit, jfets, gate_v, bus.high_v - bus.low_v)
+    stopped = stopped_stages(
+        octave_slopes(circuit, jfets, gate_v), np.log2(breaks).mean(axis=1), bus.high_v - bus.low_v
+    )
     margin, stable = _loop_state(circuit, breaks)
     return Cycle(
         time_s=time_s,
@@ -188,19 +190,23 @@ def octave_slopes(circuit: Circuit, jfets: Sequence[Jfet], gate_v: npt.ArrayLike
     return np.asarray(keep * slopes / total / np.log(2.0))
 
 
-def stopped_stages(
-    circuit: Circuit, jfets: Sequence[Jfet], gate_v: Array, swing_v: float
-) -> npt.NDArray[np.bool_]:
+def stopped_stages(slopes: Array, mean_track: Array, swing_v: float) -> npt.NDArray[np.bool_]:
     """Return which stages have stopped while another still moves, shape (times, stages).
 
     A stage is stopped where its slope is below a quarter of the largest while that one
     still matters: times the gate's swing it is above a quarter of the mean track's range.
+
+    Parameters
+    ----------
+    slopes : ndarray
+        ``d log2 f_i / d VG``, shape (times, stages) [octaves/V].
+    mean_track : ndarray
+        Mean over the stages of ``log2 f_i``, shape (times,) [octaves].
+    swing_v : float
+        The gate's swing over the cycle [V].
     """
-    slopes = octave_slopes(circuit, jfets, gate_v)
-    mean_track = np.log2(set_break_hz(circuit, jfets, gate_v)).mean(axis=1)
-    cycle_range = mean_track.max() - mean_track.min()
     largest = slopes.max(axis=1, keepdims=True)
-    matters = largest * swing_v > STOPPED_SHARE * cycle_range
+    matters = largest * swing_v > STOPPED_SHARE * np.ptp(mean_track)
     return np.asarray((slopes < STOPPED_SHARE * largest) & matters)
 
 
