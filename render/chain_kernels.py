@@ -24,9 +24,8 @@ gate : (frames, L) gate bus [V]
 out : (frames, L) last stage's output [V]
 lane : (5, S, L) per part: VC, h beta/C, lambda, w, 1/w
 stage : (9, S) per stage: h/(C Rp) with other loads, a, b, c, w0, w1, w2, w3, h/(C Rnet)
-state : (8, S, L) q1, G1, G2, G3, v1..v4; carried from call to call
-first : frames before this one only warm the state up: not written, not counted
-tally : counts and extremes, see the constants below
+state : (8, S, L) q1, G1, G2, G3, v1..v4; carried on from call to call
+tally : (L, TALLIES) counts and extremes, added to; see the constants below
 """
 
 from __future__ import annotations
@@ -132,7 +131,7 @@ def lane_kernel(
     carried = soft and passes == 1 and not half_drain
 
     @kernel(boundscheck=False)
-    def run(x, gate, out, lane, stage, state, first, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
+    def run(x, gate, out, lane, stage, state, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
         for s in range(S):
             for j in range(L):
                 i = s * L + j
@@ -143,9 +142,6 @@ def lane_kernel(
         for i in range(OCH, SIZE):
             work[i] = 0.0
         for n in range(x.shape[0]):
-            if n == first:
-                for i in range(OCH, SIZE):
-                    work[i] = 0.0
             # Start voltages, extrapolated; the law's two sides in loops of their own, short
             # enough for several lanes' chains of dependent steps to overlap.
             anchor = n % CARRY == 0
@@ -260,9 +256,8 @@ def lane_kernel(
                     work[OV1 + i] = v
             for j in range(L):
                 work[OTOP + j] = max(work[OTOP + j], abs(work[OX + j]))
-            if n >= first:
-                for j in range(L):
-                    out[n, j] = work[OX + j]
+            for j in range(L):
+                out[n, j] = work[OX + j]
             if n % COUNT_EVERY == 0:
                 for s in range(S):
                     for j in range(L):
@@ -282,9 +277,9 @@ def lane_kernel(
             tally[j, GATE_DRAIN] += COUNT_EVERY * work[OGD + j]
             tally[j, LOW_INPUT] += COUNT_EVERY * work[OLO + j]
             tally[j, HIGH_INPUT] += COUNT_EVERY * work[OHI + j]
-            tally[j, TOP] = work[OTOP + j]
-            tally[j, CHANGE] = work[OCH + j]
-            tally[j, BUS] = work[OBUS + j]
+            tally[j, TOP] = max(tally[j, TOP], work[OTOP + j])
+            tally[j, CHANGE] = max(tally[j, CHANGE], work[OCH + j])
+            tally[j, BUS] = max(tally[j, BUS], work[OBUS + j])
 
     return run, SIZE
 
@@ -327,7 +322,6 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         lane,
         stage,
         state,
-        first,
         conduct,
         low,
         high,
@@ -448,9 +442,6 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                 if change < settled_v:
                     done = True
                     break
-            if n == first:
-                for k in range(TALLIES):
-                    tally[j, k] = 0.0
             clipped = False
             for s in range(S):
                 if ys[s] <= rail_low or ys[s] >= rail_high:
@@ -472,7 +463,6 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     tally[j, HIGH_INPUT] += COUNT_EVERY if v[s] > high else 0.0
             tally[j, RAIL] += 1.0 if clipped else 0.0
             tally[j, STUCK] += 0.0 if done else 1.0
-            if n >= first:
-                out[n, j] = ys[S - 1]
+            out[n, j] = ys[S - 1]
 
     return run

@@ -32,8 +32,8 @@ Gate = Callable[[int, int, float], Array]
 
 LANES = 32
 BUNDLES = 2  # slices of a stretch = LANES x BUNDLES, whatever the machine's cores
-SLICE_STEPS = 16384
-MOST_CELLS = 8_000_000  # bound on one stretch's array, for memory
+SLICE_STEPS = 32768
+MOST_STEPS = 6_000_000  # in one stretch, all channels together: 48 MB for each array of it
 RESAMPLER = "VHQ"
 
 
@@ -161,9 +161,11 @@ class Engine:
         self._gate = gate
         self._chain_only = chain_only
         self._rails = circuit.rails_v
-        lanes = LANES
+        # Each slice is at least twice its warm-up, which bounds what the warm-ups cost, and
+        # all slices of all channels together fit the memory set aside.
         steps = max(SLICE_STEPS, 2 * plan.warm_up_steps)
-        while lanes > 1 and lanes * (steps + plan.warm_up_steps) > MOST_CELLS:
+        lanes = LANES
+        while lanes > 1 and lanes * BUNDLES * steps * channels > MOST_STEPS:
             lanes //= 4
         self._slice_steps = steps
         self._runner = LaneRunner(
@@ -285,38 +287,37 @@ class Engine:
         self._done_steps += len(volts)
         if self._chain_only:
             return wet
-        mixed = self._dry_gain * coupled + self._wet_gain * wet
-        return self._load_gain * self._couple_out(mixed)
+        wet *= self._load_gain * self._wet_gain
+        coupled *= self._load_gain * self._dry_gain
+        wet += coupled
+        del coupled
+        return self._couple_out(wet)
 
     def _chain(self, x: Array) -> Array:
         """Cut a stretch into slices, run them side by side and join them."""
         warm = self.plan.warm_up_steps
-        lanes = self._runner.lanes
-        length = -(-len(x) // (lanes * BUNDLES))
-        padded = lanes * BUNDLES * length
-        history = np.concatenate([self._tail, x, np.zeros((padded - len(x), self._channels))])
-        gate = self._gate(self._done_steps - warm, warm + padded, self.rate_hz)
-        self._tail = history[len(x) : len(x) + warm]
+        bundle = self._runner.lanes * -(-len(x) // (self._runner.lanes * BUNDLES))
+        padding = np.zeros((BUNDLES * bundle - len(x), self._channels))
+        history = np.concatenate([self._tail, x, padding])
+        self._tail = history[len(x) : len(x) + warm].copy()
+        gate = self._gate(self._done_steps - warm, len(history), self.rate_hz)
+        wet = np.empty((BUNDLES * bundle, self._channels))
 
-        def bundle(job: tuple[int, int]) -> tuple[Array, Tally]:
+        def run(job: tuple[int, int]) -> Tally:
             channel, number = job
-            begin = number * lanes * length
-            count = lanes * length + warm
-            own = _slices(history[begin : begin + count, channel], lanes, length, warm)
-            bus = _slices(gate[begin : begin + count], lanes, length, warm)
-            out, tally = self._runner.run(own, bus, warm)
-            return out.T.reshape(-1), tally
+            part = slice(number * bundle, (number + 1) * bundle + warm)
+            track = np.ascontiguousarray(history[part, channel])
+            out, tally = self._runner.run_slices(track, gate[part], warm)
+            wet[number * bundle : (number + 1) * bundle, channel] = out
+            return tally
 
         jobs = [(channel, number) for channel in range(self._channels) for number in range(BUNDLES)]
         if self._workers > 1:
             with ThreadPoolExecutor(min(self._workers, len(jobs))) as pool:
-                results = list(pool.map(bundle, jobs))
+                tallies = list(pool.map(run, jobs))
         else:
-            results = [bundle(job) for job in jobs]
-        wet = np.empty((padded, self._channels))
-        for (channel, number), (out, tally) in zip(jobs, results, strict=True):
-            wet[number * lanes * length : (number + 1) * lanes * length, channel] = out
-            self._tally = self._tally + tally
+            tallies = [run(job) for job in jobs]
+        self._tally = sum(tallies, self._tally)
         return wet[: len(x)]
 
 
@@ -343,12 +344,3 @@ class HighPass:
         """Return the next stretch, shape (frames, channels)."""
         y, self._state = lfilter(self._b, self._a, x, axis=0, zi=self._state)
         return np.asarray(y)
-
-
-def _slices(track: Array, lanes: int, length: int, warm: int) -> Array:
-    """Return overlapping slices as columns, shape (warm + length, lanes)."""
-    stride = track.strides[0]
-    view = np.lib.stride_tricks.as_strided(
-        track, (warm + length, lanes), (stride, stride * length), writeable=False
-    )
-    return np.ascontiguousarray(view)

@@ -7,8 +7,9 @@ the careful loop over the same input.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -45,6 +46,8 @@ LEFT_OVER_V = 1e-5
 # The furthest the gate may go while its side of the law is carried on by expansion: the
 # third-order rest, (2 mV/knee)^3/6 of it, is worth less than a microvolt at the drain.
 BUS_STEP_V = 2e-3
+# Frames fed to a loop at a time.
+PIECE = 2048
 
 
 @dataclass(frozen=True)
@@ -163,11 +166,11 @@ class LaneRunner:
         Parameters
         ----------
         x : ndarray
-            First stage's input, shape (frames, lanes), C order [V].
+            First stage's input, shape (frames, lanes) [V].
         gate : ndarray
-            Gate bus, shape (frames, lanes), C order [V].
+            Gate bus, shape (frames, lanes) [V].
         first : int
-            Frames before this one warm the chain up and are not written.
+            Frames before this one warm the chain up and are not returned.
 
         Returns
         -------
@@ -176,31 +179,114 @@ class LaneRunner:
         tally : Tally
             What was counted from frame `first` on.
         """
-        out, tally = self._pass(x, gate, first, passes=1)
+        out = np.empty((len(x) - first, self.lanes))
+        return out, self._run_into(out, x, gate, first)
+
+    def run_slices(self, track: Array, gate: Array, warm: int) -> tuple[Array, Tally]:
+        """Cut a track into as many slices as there are lanes, run them and join them.
+
+        Parameters
+        ----------
+        track : ndarray
+            First stage's input, shape (warm + lanes x length,) [V].
+        gate : ndarray
+            Gate bus, shape alike [V].
+        warm : int
+            Frames each slice is warmed up over: those before it on the track.
+
+        Returns
+        -------
+        out : ndarray
+            Last stage's output past the first `warm` frames, shape (lanes x length,) [V].
+        tally : Tally
+            What was counted.
+        """
+        length = (len(track) - warm) // self.lanes
+        out = np.empty(self.lanes * length)
+        tally = self._run_into(
+            out.reshape(self.lanes, length).T,
+            _columns(track, self.lanes, length, warm),
+            _columns(gate, self.lanes, length, warm),
+            warm,
+        )
+        return out, tally
+
+    def _run_into(self, out: Array, x: Array, gate: Array, first: int) -> Tally:
+        """Run all lanes, the fast loop first, and write what follows the warm-up into `out`."""
+        tally = self._fast_pass(out, x, gate, first, passes=1)
         again = self._unfit(out, tally)
         if len(again):
             # Lanes are independent: what one lane gets does not depend on its neighbours.
-            better, counted = self._pass(x, gate, first, passes=2)
+            better = np.empty_like(out)
+            counted = self._fast_pass(better, x, gate, first, passes=2)
             out[:, again] = better[:, again]
             tally[again] = counted[again]
             again = again[np.isin(again, self._unfit(better, counted))]
         if len(again):
-            self._carefully(again, x, gate, first, out, tally)
+            self._carefully(again, out, x, gate, first, tally)
         total = [float(count) for count in tally.sum(axis=0)]
-        steps = float(len(again) * (len(x) - first))
-        return out[first:], Tally(*total[:4], total[RAIL], total[STUCK], steps)
+        steps = float(len(again) * len(out))
+        return Tally(*total[:4], total[RAIL], total[STUCK], steps)
 
-    def _pass(self, x: Array, gate: Array, first: int, passes: int) -> tuple[Array, Array]:
-        """Run the fast loop over all lanes."""
+    def _fast_pass(self, out: Array, x: Array, gate: Array, first: int, *, passes: int) -> Array:
+        """Run the fast loop over all lanes and return its tally, (lanes, TALLIES)."""
         run, size = self._fast[passes - 1]
-        out = np.zeros_like(x)
-        tally = np.zeros((self.lanes, TALLIES))
         state = np.zeros((STATES, self.stages, self.lanes))
-        run(
-            x, gate, out, self.lane_table, self.stage_table, state, first,
-            CONDUCTING_V, *self.common_mode, self.keep, np.zeros(size), tally,
-        )  # fmt: skip
-        return out, tally
+        work = np.zeros(size)
+
+        def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
+            run(
+                x, gate, out, self.lane_table, self.stage_table, state,
+                CONDUCTING_V, *self.common_mode, self.keep, work, tally,
+            )  # fmt: skip
+
+        return self._in_pieces(piece, out, x, gate, first)
+
+    def _carefully(
+        self,
+        chosen: npt.NDArray[np.intp],
+        out: Array,
+        x: Array,
+        gate: Array,
+        first: int,
+        tally: Array,
+    ) -> None:
+        """Do the chosen lanes again with the careful loop."""
+        careful = careful_kernel(self.soft, self.half_drain)
+        state = np.zeros((STATES, self.stages, self.lanes))
+        better = np.empty_like(out)
+
+        def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
+            for lane in chosen:
+                careful(
+                    x, gate, out, self.lane_table, self.stage_table, state,
+                    CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
+                    *self.rails, tally,
+                )  # fmt: skip
+
+        counted = self._in_pieces(piece, better, x, gate, first)
+        out[:, chosen] = better[:, chosen]
+        tally[chosen] = counted[chosen]
+
+    def _in_pieces(
+        self,
+        piece: Callable[[Array, Array, Array, Array], None],
+        out: Array,
+        x: Array,
+        gate: Array,
+        first: int,
+    ) -> Array:
+        """Feed a loop piece by piece, so that its working set stays in the cache."""
+        made = np.empty((PIECE, self.lanes))
+        warming, tally = np.zeros((self.lanes, TALLIES)), np.zeros((self.lanes, TALLIES))
+        edges = [*range(0, first, PIECE), *range(first, len(x), PIECE), len(x)]
+        for begin, end in pairwise(edges):
+            block, bus = (np.ascontiguousarray(a[begin:end]) for a in (x, gate))
+            rows = made[: end - begin]
+            piece(block, bus, rows, tally if begin >= first else warming)
+            if begin >= first:
+                out[begin - first : end - first] = rows
+        return tally
 
     def _unfit(self, out: Array, tally: Array) -> npt.NDArray[np.intp]:
         """Return the lanes that came to a rail or whose last pass corrected too much.
@@ -213,22 +299,10 @@ class LaneRunner:
         fit &= np.isfinite(out[-1])
         return np.flatnonzero(~fit)
 
-    def _carefully(
-        self,
-        chosen: npt.NDArray[np.intp],
-        x: Array,
-        gate: Array,
-        first: int,
-        out: Array,
-        tally: Array,
-    ) -> None:
-        """Do the chosen lanes again with the careful loop."""
-        careful = careful_kernel(self.soft, self.half_drain)
-        state = np.zeros((STATES, self.stages, self.lanes))
-        tally[chosen] = 0.0
-        for lane in chosen:
-            careful(
-                x, gate, out, self.lane_table, self.stage_table, state, first,
-                CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
-                *self.rails, tally,
-            )  # fmt: skip
+
+def _columns(track: Array, lanes: int, length: int, warm: int) -> Array:
+    """Return overlapping slices of a track as columns, a view of (warm + length, lanes)."""
+    stride = track.strides[0]
+    return np.lib.stride_tricks.as_strided(
+        track, (warm + length, lanes), (stride, stride * length), writeable=False
+    )

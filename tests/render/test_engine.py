@@ -92,7 +92,7 @@ def lane_case(jfets, peak=0.4, circuit=None):
 def carefully(runner, x, gate):
     out = np.zeros_like(x)
     tally = np.zeros((runner.lanes, TALLIES))
-    runner._carefully(np.arange(runner.lanes), x, gate, 0, out, tally)
+    runner._carefully(np.arange(runner.lanes), out, x, gate, 0, tally)
     assert tally[:, STUCK].sum() == 0
     return out
 
@@ -100,13 +100,13 @@ def carefully(runner, x, gate):
 def test_second_pass_steps_in_where_one_is_not_enough(monkeypatch):
     runner, x, gate = lane_case(parts(0.0))
     calls = []
-    once = LaneRunner._pass
+    once = LaneRunner._fast_pass
 
     def watch(self, *args, passes):
         calls.append(passes)
         return once(self, *args, passes=passes)
 
-    monkeypatch.setattr(LaneRunner, "_pass", watch)
+    monkeypatch.setattr(LaneRunner, "_fast_pass", watch)
     runner.change_limit_v = 1e-9
     out, _ = runner.run(x, gate, 0)
     assert calls == [1, 2]
