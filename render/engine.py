@@ -33,7 +33,7 @@ Gate = Callable[[int, int, float], Array]
 LANES = 32
 BUNDLES = 2  # slices of a stretch = LANES x BUNDLES, whatever the machine's cores
 SLICE_STEPS = 32768
-MOST_STEPS = 6_000_000  # in one stretch, all channels together: 48 MB for each array of it
+MOST_STEPS = 4_000_000  # in one stretch, all channels together: 32 MB for each array of it
 RESAMPLER = "VHQ"
 
 
