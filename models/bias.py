@@ -57,8 +57,8 @@ class Bias:
         The gate bus there.
     cycle : Cycle
         The whole cycle there.
-    uniform_position, uniform_objective : float
-        The same for a uniform set (the set's mean part in every stage).
+    uniform_position, uniform_objective, uniform_travel_octaves : float
+        The same for a uniform set (the set's mean part in every stage) at its own bias.
     loss : float
         Share of the uniform set's objective that this set falls short of, 0 to 1.
     warnings : tuple of str
@@ -76,13 +76,16 @@ class Bias:
     cycle: Cycle
     uniform_position: float
     uniform_objective: float
+    uniform_travel_octaves: float
     loss: float
     warnings: tuple[str, ...]
 
     @property
     def uniform_travel_share(self) -> float:
-        """The set's objective as a share of the uniform set's."""
-        return 1.0 - self.loss
+        """The set's travel as a share of the uniform set's; 1 where even that has none."""
+        if self.uniform_travel_octaves == 0.0:
+            return 1.0
+        return self.travel_octaves / self.uniform_travel_octaves
 
 
 def solve_bias(circuit: Circuit, jfets: Sequence[Jfet], rate: Setting) -> Bias:
@@ -106,9 +109,10 @@ def solve_bias(circuit: Circuit, jfets: Sequence[Jfet], rate: Setting) -> Bias:
     position, objective = search.best()
     reference = [mean_part(jfets)] * len(jfets)
     if all(_same(part, reference[0]) for part in jfets):
-        uniform_position, uniform_objective = position, objective
+        uniform, uniform_position, uniform_objective = search, position, objective
     else:
-        uniform_position, uniform_objective = BiasSearch(circuit, reference, rate).best()
+        uniform = BiasSearch(circuit, reference, rate)
+        uniform_position, uniform_objective = uniform.best()
     bus = solve_bus(circuit, position, rate)
     cycle = analyse_cycle(circuit, jfets, bus)
     per_turn = _octaves_per_travel(circuit, jfets, rate, position) / circuit.bus.trimmer.turns
@@ -125,6 +129,7 @@ def solve_bias(circuit: Circuit, jfets: Sequence[Jfet], rate: Setting) -> Bias:
         cycle=cycle,
         uniform_position=uniform_position,
         uniform_objective=uniform_objective,
+        uniform_travel_octaves=uniform.travel_octaves(uniform_position),
         loss=max(0.0, loss),
         warnings=_warnings(circuit, position, objective, cycle),
     )
@@ -147,10 +152,17 @@ class BiasSearch:
         self._slopes = octave_slopes(circuit, jfets, grid)
         self._mean_track = np.log2(set_break_hz(circuit, jfets, grid)).mean(axis=1)
 
+    def travel_octaves(self, position: float) -> float:
+        """Return the travel at a trimmer position of 0 to 1 [octaves]."""
+        return self._travel(solve_bus(self._circuit, position, self._rate))
+
+    def _travel(self, bus: BusWave) -> float:
+        return least_travel(notch_travels(self._table.sweep(bus.low_v, bus.high_v)))
+
     def objective(self, position: float) -> float:
         """Return travel times (1 - stall) at a trimmer position of 0 to 1 [octaves]."""
         bus = solve_bus(self._circuit, position, self._rate)
-        travel = least_travel(notch_travels(self._table.sweep(bus.low_v, bus.high_v)))
+        travel = self._travel(bus)
         if travel == 0.0:
             return 0.0
         gate_v = bus.gate_v(np.arange(POINTS) * (bus.period_s / POINTS))
