@@ -174,7 +174,7 @@ def set_figures(
         jfets=jfets,
         bias=bias,
         expected_stagger_octaves=expected,
-        travel_share=bias.travel_octaves / bias.uniform_travel_octaves,
+        travel_share=bias.travel_octaves / max(bias.uniform_objective, 1e-9),
         order_matters=matters,
     )
 
