@@ -57,9 +57,10 @@ def travel_and_stall(
     """Return travel [octaves] and stall of a set at one trimmer position."""
     travel = 1e300
     for k in range(targets.shape[0]):
-        bottom = max(notch_octave(low, members, count, targets[k]), band_low)
-        top = min(notch_octave(high, members, count, targets[k]), band_high)
-        travel = min(travel, max(top - bottom, 0.0))
+        bottom = notch_octave(low, members, count, targets[k])
+        top = notch_octave(high, members, count, targets[k])
+        if top > band_low and bottom < band_high:  # else never heard
+            travel = min(travel, min(top, band_high) - max(bottom, band_low))
     if travel > 1e299:
         travel = 0.0
     times = level.shape[1]

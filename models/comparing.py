@@ -13,8 +13,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .chain import fixed_conductance_s
+from .cycle import Bus
 from .pairwise import Array, Parts, octaves
-from .sweepgrid import Bus, even_times, gate_share
+from .sweepgrid import even_times, gate_share
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -88,7 +90,7 @@ def staggers(
     """
     draws, stages = cutoff_v.shape
     gate_v = gate_share(circuit) * bus.gate_v(even_times(bus.period_s, points))
-    shunt_s = np.tile([1.0 / stage.shunt_ohm for stage in circuit.stages], draws)[:, None]
+    shunt_s = np.tile(fixed_conductance_s(circuit), draws)[:, None]
 
     def level(cutoff: Array, log_factor: Array, knee: Array) -> Array:
         flat = Parts(

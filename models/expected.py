@@ -12,8 +12,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .chain import fixed_conductance_s
+from .cycle import Bus
 from .pairwise import Array, Parts, octaves
-from .sweepgrid import Bus, even_times, gate_share
+from .sweepgrid import even_times, gate_share
 
 if TYPE_CHECKING:
     from .circuit import Circuit
@@ -80,7 +82,7 @@ def expected_stagger(parts: Parts, circuit: Circuit, bus: Bus, points: int = POI
         Instants over the cycle.
     """
     gate_v = gate_share(circuit) * bus.gate_v(even_times(bus.period_s, points))
-    shunt_s = np.array([[1.0 / stage.shunt_ohm] for stage in circuit.stages])
+    shunt_s = fixed_conductance_s(circuit)[:, None]
     deviation, slope = deviations(parts, gate_v, shunt_s)
     count = len(parts)
     rows = slope.reshape(count * points, 2 * count)

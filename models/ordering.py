@@ -14,7 +14,6 @@ lacks and the uniform set has counts as one octave astray.
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 from itertools import permutations
 from typing import TYPE_CHECKING
 
@@ -35,19 +34,6 @@ LOST_NOTCH_OCTAVES = 1.0
 # 5! = 120 permutations are all tried; beyond, exchanges of two.
 EXHAUSTIVE_STAGES = 5
 CYCLE_POINTS = 48
-
-
-def uniform_part(jfets: Sequence[Jfet]) -> Jfet:
-    """Return the set's reference part: mean cut-off voltage, mean ln beta, mean of the rest."""
-    count = len(jfets)
-    return replace(
-        jfets[0],
-        cutoff_v=math.fsum(one.cutoff_v for one in jfets) / count,
-        beta_a_per_v2=math.exp(math.fsum(math.log(one.beta_a_per_v2) for one in jfets) / count),
-        lambda_per_v=math.fsum(one.lambda_per_v for one in jfets) / count,
-        knee_v=math.fsum(one.knee_v for one in jfets) / count,
-        label="",
-    )
 
 
 def straying(tracks_hz: Array, depth_db: Array, uniform_hz: Array, uniform_db: Array) -> float:
@@ -98,12 +84,12 @@ def best_order(
     free stages is exchanged as long as that helps, which finds a good order, not
     provably the best.
     """
-    from .cycle import analyse_cycle
+    from .cycle import analyse_cycle, mean_part
 
     def cycle_of(order: Sequence[int]) -> Cycle:
         return analyse_cycle(circuit, [jfets[n] for n in order], bus, points=CYCLE_POINTS)
 
-    uniform = analyse_cycle(circuit, [uniform_part(jfets)] * len(jfets), bus, points=CYCLE_POINTS)
+    uniform = analyse_cycle(circuit, [mean_part(jfets)] * len(jfets), bus, points=CYCLE_POINTS)
 
     def cost(order: Sequence[int]) -> float:
         cycle = cycle_of(order)

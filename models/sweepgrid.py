@@ -13,11 +13,13 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Protocol
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
+from .chain import capacitors_f, fixed_conductance_s
+from .cycle import AUDIBLE_HZ, Bus
 from .pairwise import Array, Cloud, Index, Octaves, Parts, cloud, octaves
 
 if TYPE_CHECKING:
@@ -27,32 +29,8 @@ if TYPE_CHECKING:
 GRID_POSITIONS = 96
 COARSE_POSITIONS = 49
 GRID_TIMES = 64
-HEARD_HZ = (20.0, 20e3)
 # Sets whose travel is under this share of a uniform set's rank after the others.
 TRAVEL_SHARE = 0.9
-
-
-class Bus(Protocol):
-    """What the grid needs of a gate bus wave."""
-
-    @property
-    def period_s(self) -> float:
-        """Period [s]."""
-        ...
-
-    @property
-    def low_v(self) -> float:
-        """Lowest gate-bus voltage from the reference rail [V]."""
-        ...
-
-    @property
-    def high_v(self) -> float:
-        """Highest gate-bus voltage from the reference rail [V]."""
-        ...
-
-    def gate_v(self, time_s: npt.ArrayLike) -> Array:
-        """Return the gate-bus voltage at these times [V]."""
-        ...
 
 
 def even_times(period_s: float, points: int) -> Array:
@@ -172,11 +150,11 @@ def build_grid(
             return solve_bus(circuit, position, rate)
 
     share = gate_share(circuit)
-    shunt_s = 1.0 / _geometric_mean([stage.shunt_ohm for stage in circuit.stages])
-    capacitor_f = _geometric_mean([stage.capacitor_f for stage in circuit.stages])
+    shunt_s = _geometric_mean(fixed_conductance_s(circuit))
+    capacitor_f = _geometric_mean(capacitors_f(circuit))
     band = (
-        math.log2(2.0 * math.pi * HEARD_HZ[0] * capacitor_f),
-        math.log2(2.0 * math.pi * HEARD_HZ[1] * capacitor_f),
+        math.log2(2.0 * math.pi * AUDIBLE_HZ[0] * capacitor_f),
+        math.log2(2.0 * math.pi * AUDIBLE_HZ[1] * capacitor_f),
     )
     factors = np.log2(np.tan(notch_targets(circuit.stage_count) / circuit.stage_count))
 
@@ -187,9 +165,11 @@ def build_grid(
         return buses, np.ascontiguousarray(flat[..., 0].T), np.ascontiguousarray(flat[..., 1].T)
 
     def uniform(low: Array, high: Array) -> Array:
-        bottom = np.maximum(low[..., None] + factors, band[0])
-        top = np.minimum(high[..., None] + factors, band[1])
-        return np.asarray(np.maximum(top - bottom, 0.0).min(axis=-1))
+        bottom, top = low[..., None] + factors, high[..., None] + factors
+        heard = (top > band[0]) & (bottom < band[1])
+        travel = np.minimum(top, band[1]) - np.maximum(bottom, band[0])
+        least = np.where(heard, travel, np.inf).min(axis=-1)
+        return np.asarray(np.where(heard.any(axis=-1), least, 0.0))
 
     coarse = np.linspace(0.0, 1.0, COARSE_POSITIONS)
     _, low, high = extremes(coarse)
@@ -221,5 +201,5 @@ def build_grid(
     )
 
 
-def _geometric_mean(values: list[float]) -> float:
-    return math.exp(math.fsum(math.log(value) for value in values) / len(values))
+def _geometric_mean(values: Array) -> float:
+    return float(np.exp(np.log(values).mean()))
