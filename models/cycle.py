@@ -126,7 +126,7 @@ def analyse_cycle(circuit: Circuit, jfets: Sequence[Jfet], bus: Bus, points: int
     """
     if len(jfets) != circuit.stage_count:
         raise ValueError(f"{len(jfets)} parts for {circuit.stage_count} stages")
-    time_s = np.arange(points) * (bus.period_s / points)
+    time_s = np.arange(points, dtype=float) * (bus.period_s / points)
     gate_v = bus.gate_v(time_s)
     breaks = set_break_hz(circuit, jfets, gate_v)
     reference = set_break_hz(circuit, [mean_part(jfets)] * len(jfets), gate_v)
@@ -237,7 +237,7 @@ def _turnarounds(time_s: Array, track: Array) -> Array:
     for _ in range(2):
         for i in np.flatnonzero(rising == 0.0):
             rising[i] = rising[i - 1]
-    return time_s[rising != np.roll(rising, 1)]
+    return np.asarray(time_s[rising != np.roll(rising, 1)])
 
 
 def _loop_state(circuit: Circuit, breaks: Array) -> tuple[float, bool]:

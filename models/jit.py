@@ -22,6 +22,8 @@ from typing import Any, TypeVar, cast
 import numba
 
 F = TypeVar("F", bound=Callable[..., Any])
+# numba builds its settings as it is imported; they have no types.
+numba_config: Any = numba.config
 
 # Contraction to fused multiply-add is allowed: it speeds the loops and is the same
 # on every run of one machine. Reassociation is not: NaN checks, the rounding
@@ -99,14 +101,14 @@ def kernel(**options: Any) -> Callable[[F], F]:
         folder = cache_folder()
         if folder is None:
             return cast(F, numba.njit(**settings)(function))
-        before = numba.config.CACHE_DIR
-        numba.config.CACHE_DIR = str(folder)
+        before = numba_config.CACHE_DIR
+        numba_config.CACHE_DIR = str(folder)
         try:
             dispatcher = numba.njit(cache=True, **settings)(function)
         except (RuntimeError, OSError):
             return cast(F, numba.njit(**settings)(function))
         finally:
-            numba.config.CACHE_DIR = before
+            numba_config.CACHE_DIR = before
         _forgive_full_disk(dispatcher)
         return cast(F, dispatcher)
 

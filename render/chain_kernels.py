@@ -55,7 +55,7 @@ COUNT_EVERY = 4
 
 
 @kernel(inline="always")
-def stage_map(  # type: ignore[no-untyped-def]
+def stage_map(
     v, pd, sd, source, ps, ss, past, bus, hb, lam, pw, keep, hs, hn, w0, soft, bent, half_drain
 ):
     """Return one stage linearised about ``v``: ``v_new = d x + alpha``, and the charge's bend.
@@ -131,7 +131,7 @@ def lane_kernel(
     carried = soft and passes == 1 and not half_drain
 
     @kernel(boundscheck=False)
-    def run(x, gate, out, lane, stage, state, conduct, low, high, keep, work, tally):  # type: ignore[no-untyped-def]
+    def run(x, gate, out, lane, stage, state, conduct, low, high, keep, work, tally):
         for s in range(S):
             for j in range(L):
                 i = s * L + j
@@ -285,7 +285,7 @@ def lane_kernel(
 
 
 @kernel(boundscheck=False)
-def chain(start, fed, d, alpha, stage, S, frm, rail_low, rail_high, v, xs, ys):  # type: ignore[no-untyped-def]
+def chain(start, fed, d, alpha, stage, S, frm, rail_low, rail_high, v, xs, ys):
     """Walk the linearised chain with clamped outputs; return the feeding stage's output."""
     x = start
     back = 0.0
@@ -331,7 +331,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         rail_low,
         rail_high,
         tally,
-    ):  # type: ignore[no-untyped-def]
+    ):
         S = stage.shape[1]
         hist, v, d, alpha, new, xs, ys = (
             np.zeros(S),

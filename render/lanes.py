@@ -20,9 +20,13 @@ from ..models.jfet import Jfet
 from .chain_kernels import (
     BUS,
     CHANGE,
+    GATE_DRAIN,
+    GATE_SOURCE,
     HBETA,
+    HIGH_INPUT,
     KNEE,
     LAMBDA,
+    LOW_INPUT,
     PER_KNEE,
     RAIL,
     STATES,
@@ -226,7 +230,15 @@ class LaneRunner:
             self._carefully(again, out, x, gate, first, tally)
         total = [float(count) for count in tally.sum(axis=0)]
         steps = float(len(again) * len(out))
-        return Tally(*total[:4], total[RAIL], total[STUCK], steps)
+        return Tally(
+            gate_source=total[GATE_SOURCE],
+            gate_drain=total[GATE_DRAIN],
+            low_input=total[LOW_INPUT],
+            high_input=total[HIGH_INPUT],
+            rail=total[RAIL],
+            stuck=total[STUCK],
+            careful_steps=steps,
+        )
 
     def _fast_pass(self, out: Array, x: Array, gate: Array, first: int, *, passes: int) -> Array:
         """Run the fast loop over all lanes and return its tally, (lanes, TALLIES)."""

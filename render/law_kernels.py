@@ -49,7 +49,7 @@ def _double(typingctx: Any, x: Any) -> Any:
 
 
 @kernel(inline="always")
-def falling_exp(t):  # type: ignore[no-untyped-def]
+def falling_exp(t):
     """Return ``exp(-t)`` for ``t`` from 0 up."""
     y = -min(t, MOST) * LOG2_E
     shifted = y + ROUNDER
@@ -66,7 +66,7 @@ def falling_exp(t):  # type: ignore[no-untyped-def]
 
 
 @kernel(inline="always")
-def soft_positive(x, w, per_w):  # type: ignore[no-untyped-def]
+def soft_positive(x, w, per_w):
     """Return ``P(x)`` and ``P'(x)`` for knee ``w`` with ``per_w = 1/w``."""
     z = falling_exp(abs(x) * per_w)
     one, two = 1.0 + z, 2.0 + z
@@ -83,14 +83,14 @@ def soft_positive(x, w, per_w):  # type: ignore[no-untyped-def]
 
 
 @kernel(inline="always")
-def hard_positive(x, w, per_w):  # type: ignore[no-untyped-def]
+def hard_positive(x, w, per_w):
     """Return ``max(x, 0)`` and its slope: the law at knee 0, same form as `soft_positive`."""
     slope = 1.0 if x > 0.0 else 0.0
     return max(x, 0.0), slope
 
 
 @kernel(inline="always")
-def positive(x, w, per_w, soft):  # type: ignore[no-untyped-def]
+def positive(x, w, per_w, soft):
     """Return ``P(x)`` and ``P'(x)``; ``soft`` false gives the law at knee 0."""
     if soft:
         return soft_positive(x, w, per_w)
@@ -98,7 +98,7 @@ def positive(x, w, per_w, soft):  # type: ignore[no-untyped-def]
 
 
 @kernel(inline="always")
-def second(p, slope, per_w, soft):  # type: ignore[no-untyped-def]
+def second(p, slope, per_w, soft):
     """Return half the second derivative of ``P(x)^2`` from ``P`` and ``P'``."""
     if soft:
         return slope * slope + p * slope * (1.0 - slope) * per_w

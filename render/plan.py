@@ -38,6 +38,7 @@ from .rules import (
 )
 
 Array = npt.NDArray[np.float64]
+Spectrum = npt.NDArray[np.complex128]
 
 # The trial's spectrum falls as 1/n; plucked and strummed sounds fall faster and come out
 # some 20 dB better.
@@ -177,7 +178,7 @@ def _conductance_ladder(circuit: Circuit, jfets: Sequence[Jfet], gate_high_v: fl
         [float(part.output_conductance(keep * gate_high_v, -DRAIN_PULL_V)) for part in jfets]
     )
     share = np.concatenate([[0.0], np.geomspace(1e-4, 1.0, STABILITY_STEPS - 1)])
-    return fixed_conductance_s(circuit) + share[:, None] * most
+    return np.asarray(fixed_conductance_s(circuit) + share[:, None] * most)
 
 
 def warm_up_steps(circuit: Circuit, rules: tuple[Rule, ...], rate_hz: float) -> int:
@@ -202,7 +203,7 @@ class _Trial:
         self.circuit, self.jfets = circuit, jfets
         self.low_v, self.high_v = low_v, high_v
         self.sample_rate = sample_rate
-        self._wideband: dict[tuple[int, tuple[Rule, ...]], Array] = {}
+        self._wideband: dict[tuple[int, tuple[Rule, ...]], Spectrum] = {}
 
     def _runner(self, factor: int, rules: tuple[Rule, ...]) -> LaneRunner:
         step = 1.0 / (self.sample_rate * factor)
@@ -217,13 +218,13 @@ class _Trial:
         fine = self._run_wideband(2 * factor, finer_rules)
         return ratio_db(coarse - fine, fine)
 
-    def _run_wideband(self, factor: int, rules: tuple[Rule, ...]) -> Array:
+    def _run_wideband(self, factor: int, rules: tuple[Rule, ...]) -> Spectrum:
         key = (factor, rules)
         if key not in self._wideband:
             self._wideband[key] = self._wideband_run(factor, rules)
         return self._wideband[key]
 
-    def _wideband_run(self, factor: int, rules: tuple[Rule, ...]) -> Array:
+    def _wideband_run(self, factor: int, rules: tuple[Rule, ...]) -> Spectrum:
         # Each lane sweeps its own part of the gate's swing in 20 ms, after 10 ms there.
         rate = self.sample_rate * factor
         first = int(0.010 * self.sample_rate) * factor
@@ -242,7 +243,7 @@ class _Trial:
         out, _ = self._runner(factor, rules).run(block, np.ascontiguousarray(gate), first)
         spectrum = np.fft.rfft(out * _window(len(out)), axis=0)
         heard = np.fft.rfftfreq(len(out), 1.0 / rate) <= min(AUDIBLE_HZ, self.sample_rate / 2)
-        return spectrum[heard] / len(out)
+        return np.asarray(spectrum[heard] / len(out))
 
     def alias_db(self, factor: int, rules: tuple[Rule, ...]) -> float:
         """Return the worst sum of aliases below 20 kHz re the fundamental [dB]."""
@@ -293,7 +294,7 @@ def aliases_db(out: Array, cycles: int, rate_hz: float, heard_hz: float) -> Arra
     )
 
 
-def ratio_db(error: Array, reference: Array) -> float:
+def ratio_db(error: Array | Spectrum, reference: Array | Spectrum) -> float:
     """Return rms(error)/rms(reference) in decibels; -400 where there is no error."""
     top = float(np.sqrt(np.mean(np.abs(error) ** 2)))
     bottom = float(np.sqrt(np.mean(np.abs(reference) ** 2)))
