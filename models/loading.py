@@ -78,6 +78,14 @@ class LoadedOscillator:
         ------
         InputError
             If the load keeps the timing capacitor from a threshold.
+
+        Notes
+        -----
+        The tap's lowest turn is the switching instant itself: the bus cannot drag it on
+        downwards. With the output high the tap would settle above its thresholds, so at
+        the lower threshold, with the bus where it would settle beside it, its current is
+        upwards; and while the tap stays above the lower threshold the bus stays above
+        that place.
         """
         self._check()
         network = _two_capacitors(self) if self.bus_f > 0.0 else _one_capacitor(self)
@@ -95,20 +103,9 @@ class LoadedOscillator:
         whole = rise + fall
         # The capacitors' mean currents are zero, so the means obey the resistors alone.
         mean = self.rest_v((self.rails_v[1] * rise + self.rails_v[0] * fall) / whole)
-        pieces = [(0.0, (low, bus_v), rests[0]), (rise, top, rests[1])]
-        # A bus far below may pull the capacitor on downwards after the switching: time 0
-        # is then where it turns.
-        late = network.turn((low, bus_v), rests[0], rise)
-        if late > 0.0:
-            state = network.advance((low, bus_v), rests[0], late)
-            pieces = [
-                (0.0, state, rests[0]),
-                (rise - late, top, rests[1]),
-                (whole - late, (low, bus_v), rests[0]),
-            ]
-        starts = tuple(start for start, _, _ in pieces)
+        starts, pieces = (0.0, rise), (((low, bus_v), rests[0]), (top, rests[1]))
         rates = network.first_per_s, network.second_per_s
-        parts = [network.coefficients(state, rest) for _, state, rest in pieces]
+        parts = [network.coefficients(state, rest) for state, rest in pieces]
         return (
             Segments(whole, starts, tuple(part[0] for part in parts), *rates, mean[0]),
             Segments(whole, starts, tuple(part[1] for part in parts), *rates, mean[1]),
@@ -184,19 +181,6 @@ class _Network:
             end *= 2.0
         time_s = find_root(short_by, 0.0, end)
         return time_s, self.advance(state, rest, time_s)
-
-    def turn(self, state: State, rest: State, end_s: float) -> float:
-        """Return when the timing capacitor, set to rise, stops falling; 0 if it rises at once."""
-
-        def slope(time_s: float) -> float:
-            x, y = (v - r for v, r in zip(self.advance(state, rest, time_s), rest, strict=True))
-            # -M = N - a 1
-            (n11, n12), _ = self.rest_matrix
-            return (n11 - self.first_per_s) * x + n12 * y
-
-        if slope(0.0) >= 0.0:
-            return 0.0
-        return find_root(slope, 0.0, end_s)
 
     def _joint(self, time_s: float) -> float:
         a, b = self.first_per_s, self.second_per_s
