@@ -1,0 +1,141 @@
+"""Arguments that every command about a circuit shares, and what they mean."""
+
+from __future__ import annotations
+
+import argparse
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
+from ...models.errors import InputError
+from ._sets import SYNTAX, add_tray_arguments
+
+if TYPE_CHECKING:
+    from ...models.quantity import Setting
+
+DEFAULT_CIRCUIT = "heron"
+
+
+def add_circuit_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--circuit``."""
+    parser.add_argument(
+        "--circuit",
+        metavar="NAME",
+        default=DEFAULT_CIRCUIT,
+        help=f"a shipped circuit's name or a circuit file (default: {DEFAULT_CIRCUIT})",
+    )
+
+
+def add_set_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add ``--circuit``, ``--set``, ``--tray`` and ``--fixture`` for one set."""
+    add_circuit_argument(parser)
+    # "append" only to notice a second one: it would silently replace the first.
+    parser.add_argument(
+        "--set", metavar="PARTS", required=True, dest="parts", action="append", help=SYNTAX
+    )
+    add_tray_arguments(parser)
+
+
+def add_rate_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--rate`` for one rate."""
+    parser.add_argument(
+        "--rate", default="noon", help="rate: 9:00, noon, 35%% or 0.8Hz (default: noon)"
+    )
+
+
+def add_trim_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--trim``."""
+    parser.add_argument(
+        "--trim",
+        default="auto",
+        help="bias trimmer: auto (solved for the set), 45%%, or the wiper above ground, 2.31V "
+        "(default: auto)",
+    )
+
+
+def add_celsius_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--celsius``."""
+    parser.add_argument(
+        "--celsius", default="27", help="channel temperature in degrees Celsius (default: 27)"
+    )
+
+
+def add_json_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--json``."""
+    parser.add_argument("--json", action="store_true", help="print the figures as JSON")
+
+
+def add_take_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add what is common to commands that write takes."""
+    parser.add_argument(
+        "--full-scale",
+        default="1 V",
+        metavar="VOLTS",
+        help="peak volts at digital full scale, in and out (default: 1 V)",
+    )
+    parser.add_argument("--overwrite", action="store_true", help="replace existing takes")
+    parser.add_argument("--float", action="store_true", help="write 32-bit float, not 24-bit")
+
+
+def only_set(args: argparse.Namespace) -> str:
+    """Return the one ``--set``.
+
+    Raises
+    ------
+    InputError
+        If there are several.
+    """
+    if len(args.parts) > 1:
+        raise InputError(
+            f"--set is given {len(args.parts)} times; this command takes one set: join its parts "
+            "with commas, or use sweepset audition for several sets"
+        )
+    return str(args.parts[0])
+
+
+def quantity(text: str, unit: str, option: str) -> float:
+    """Return a written quantity in SI units.
+
+    Raises
+    ------
+    InputError
+        If it cannot be read; names the option.
+    """
+    from ...models.quantity import parse_quantity
+
+    try:
+        return parse_quantity(text, unit)
+    except ValueError as fault:
+        raise InputError(f"{option}: {fault}") from None
+
+
+def setting(parse: Callable[[str], Setting], text: str, option: str) -> Setting:
+    """Return a knob's or trimmer's setting.
+
+    Raises
+    ------
+    InputError
+        If it cannot be read; names the option.
+    """
+    try:
+        return parse(text)
+    except InputError:
+        raise
+    except ValueError as fault:
+        raise InputError(f"{option}: {fault}") from None
+
+
+def decibels(text: str, option: str) -> float:
+    """Return a gain, -100 to 100 dB.
+
+    Raises
+    ------
+    InputError
+        If it is none; names the option.
+    """
+    try:
+        gain_db = float(text.strip().removesuffix("dB").strip())
+    except ValueError:
+        gain_db = float("nan")
+    if not -100.0 <= gain_db <= 100.0:
+        raise InputError(f"{option}: {text!r}; expected a gain in dB, -100 to 100")
+    return gain_db

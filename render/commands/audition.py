@@ -1,0 +1,105 @@
+"""``sweepset audition``: one riff, dry and through several sets at several rates."""
+
+from __future__ import annotations
+
+import argparse
+
+from . import _settings
+from ._sets import SYNTAX, add_tray_arguments
+
+HELP = "render a riff dry and through several sets at several rates, equally loud"
+EPILOG = """\
+examples:
+  sweepset audition riff.wav --tray tray.csv --set close=J07,J12,J31,J40 \\
+      --set wide=J02,J15,J33,J58 --rate 9:00 --rate noon --rate 3:00 -o listen
+  sweepset audition riff.wav --tray tray.csv --set J07,J12,J31,J40 -o listen
+
+All takes start at the same oscillator phase, are brought to one loudness (ITU-R
+BS.1770) and lowered together if one would clip. With --trim auto each set's trimmer is
+solved at the middle one of the rates and stays there for the others.
+"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add this command's arguments."""
+    parser.epilog = EPILOG
+    parser.add_argument("riff", help="the riff: WAV, FLAC or another usual audio file")
+    parser.add_argument(
+        "-o", "--out", metavar="FOLDER", required=True, help="the folder the takes go into"
+    )
+    _settings.add_circuit_argument(parser)
+    parser.add_argument(
+        "--set",
+        metavar="NAME=PARTS",
+        required=True,
+        dest="parts",
+        action="append",
+        help=f"a set, with or without a name; may be given several times; {SYNTAX}",
+    )
+    add_tray_arguments(parser)
+    parser.add_argument(
+        "--rate",
+        action="append",
+        help="rate: 9:00, noon, 35%% or 0.8Hz; may be given several times (default: noon)",
+    )
+    _settings.add_trim_argument(parser)
+    _settings.add_celsius_argument(parser)
+    _settings.add_take_arguments(parser)
+    _settings.add_json_argument(parser)
+
+
+def run(args: argparse.Namespace) -> int:
+    """Render the audition and say what was written."""
+    from ...models.circuit import load_circuit
+    from ...models.quantity import parse_rate, parse_trim
+    from ..audition import audition_takes, render_audition
+    from ..setup import TakeSettings
+    from ._screen import print_json, print_table, progress, say, warn
+    from ._sets import named_sets, read_sets
+
+    circuit = load_circuit(args.circuit)
+    names, written = named_sets(args.parts)
+    sets = dict(zip(names, read_sets(written, args, circuit), strict=True))
+    rates = [
+        _settings.setting(parse_rate, text, "--rate")
+        for text in dict.fromkeys(args.rate or ["noon"])
+    ]
+    base = TakeSettings(
+        circuit=circuit,
+        jfets=next(iter(sets.values())),
+        trimmer=_settings.setting(parse_trim, args.trim, "--trim"),
+        rate=rates[0],
+        celsius=_settings.quantity(args.celsius, "C", "--celsius"),
+        full_scale_v=_settings.quantity(args.full_scale, "V", "--full-scale"),
+    )
+    takes = audition_takes(base, sets, rates)
+    with progress() as tell:
+        made = render_audition(
+            args.riff,
+            args.out,
+            takes,
+            encoding="float32" if args.float else "pcm24",
+            overwrite=args.overwrite,
+            progress=tell,
+        )
+    warn([text for take in made.takes for text in take.warnings])
+    if args.json:
+        print_json({"folder": args.out} | made.as_record())
+        return 0
+    rows = []
+    for name, take, setup in zip(made.names, made.takes, made.setups, strict=True):
+        bus = None if setup is None else setup.bus
+        rows.append(
+            (
+                take.path.name,
+                name,
+                "" if bus is None else f"{bus.rate_hz:.3g} Hz",
+                "" if bus is None else f"{100.0 * bus.trimmer:.1f} %",
+                f"{take.lufs:.2f}",
+                f"{take.peak_dbfs:.1f}",
+            )
+        )
+    columns = ("file", "take", "rate", "trimmer", "LUFS", "peak dBFS")
+    print_table("", columns, rows)
+    say(f"full scale is {base.full_scale_v:g} V; the takes are in {args.out}")
+    return 0

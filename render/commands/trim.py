@@ -1,0 +1,72 @@
+"""``sweepset trim``: where the bias trimmer goes for a set."""
+
+from __future__ import annotations
+
+import argparse
+
+from . import _settings
+
+HELP = "find a set's bias: trimmer position, voltages, travel, stagger and stall"
+EPILOG = """\
+examples:
+  sweepset trim --tray tray.csv --set J07,J12,J31,J40
+  sweepset trim --circuit my_unit.toml --tray tray.csv --set J07,J12,J31,J40 --rate 9:00
+  sweepset trim --set=-2.10V/4.2mA,-2.12V/4.3mA,-2.15V/4.3mA,-2.11V/4.2mA --trim 2.31V
+"""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add this command's arguments."""
+    parser.epilog = EPILOG
+    _settings.add_set_arguments(parser)
+    _settings.add_rate_argument(parser)
+    _settings.add_trim_argument(parser)
+    _settings.add_celsius_argument(parser)
+    _settings.add_json_argument(parser)
+
+
+def run(args: argparse.Namespace) -> int:
+    """Solve the bias and print it."""
+    from ...models.circuit import load_circuit
+    from ...models.cycle import analyse_cycle
+    from ...models.quantity import parse_rate, parse_trim
+    from ..setup import TakeSettings, set_up
+    from ._figures import bias_record, bias_rows
+    from ._screen import print_json, print_table, warn
+    from ._sets import read_set
+
+    circuit = load_circuit(args.circuit)
+    settings = TakeSettings(
+        circuit=circuit,
+        jfets=read_set(_settings.only_set(args), args, circuit),
+        trimmer=_settings.setting(parse_trim, args.trim, "--trim"),
+        rate=_settings.setting(parse_rate, args.rate, "--rate"),
+        celsius=_settings.quantity(args.celsius, "C", "--celsius"),
+    )
+    setup = set_up(settings)
+    assert setup.bus is not None  # no trace was given
+    bias = setup.bias
+    cycle = bias.cycle if bias else analyse_cycle(setup.circuit, setup.jfets, setup.bus)
+    record = bias_record(setup.circuit, setup.jfets, setup.bus, cycle)
+    rows = bias_rows(record)
+    if bias is not None:
+        record |= {
+            "octaves_per_degree": bias.octaves_per_degree,
+            "octaves_per_turn": bias.octaves_per_turn,
+            "loss": bias.loss,
+            "warnings": list(bias.warnings),
+        }
+        if setup.circuit.bus.trimmer.turns > 1:
+            moved = f"{bias.octaves_per_turn:+.3f} octave per turn"
+        else:
+            moved = f"{bias.octaves_per_degree:+.3f} octave per degree"
+        rows += [
+            ("trimmer moves the sweep by", moved),
+            ("short of a uniform set by", f"{100.0 * bias.loss:.0f} %"),
+        ]
+        warn(bias.warnings)
+    if args.json:
+        print_json(record)
+    else:
+        print_table("", ("figure", "value"), rows)
+    return 0
