@@ -197,9 +197,12 @@ def cloud(parts: Parts, swept: Octaves, *, compact: bool = False) -> Cloud:
     points /= math.sqrt(times)
     if compact and points.shape[1] > 2:
         points = points - points.mean(axis=0)
-        power, axes = np.linalg.eigh(points.T @ points)
+        # The side with fewer entries: 60 parts at 64 instants are 400 directions or more.
+        few = count < points.shape[1]
+        power, axes = np.linalg.eigh(points @ points.T if few else points.T @ points)
         kept = power > 1e-12 * max(float(power[-1]), 1e-300)
-        points = np.ascontiguousarray(points @ axes[:, kept])
+        turned = axes[:, kept] * np.sqrt(power[kept]) if few else points @ axes[:, kept]
+        points = np.ascontiguousarray(turned)
     return Cloud(points=points, own=own)
 
 
