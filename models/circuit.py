@@ -11,12 +11,12 @@ negative end; all others from the reference rail, on which the sources sit.
 from __future__ import annotations
 
 import tomllib
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from importlib.resources import files
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import Field, ValidationError, model_validator
+from pydantic import BeforeValidator, Field, ValidationError, model_validator
 
 from .errors import InputError, near_names
 from .schema import Part, explain_faults, read_toml, within
@@ -30,11 +30,29 @@ Farads = Annotated[float, within("F", 10e-12, 10e-3, "39n")]
 StageFarads = Annotated[float, within("F", 100e-12, 10e-6, "39n")]
 SupplyVolts = Annotated[float, within("V", 3.0, 60.0, "9 V")]
 RailVolts = Annotated[float, within("V", 0.0, 60.0, "5.1 V")]
+PeakVolts = Annotated[float, within("V", 1e-3, 60.0, "1.2 V")]
 SignedVolts = Annotated[float, within("V", -60.0, 60.0, "-1.2 V")]
 HeadroomVolts = Annotated[float, within("V", 0.0, 10.0, "1.5 V")]
 Hertz = Annotated[float, within("Hz", 0.001, 100.0, "0.8 Hz")]
 Fraction = Annotated[float, within("%", 0.01, 0.99, "10 %")]
 Degrees = Annotated[float, within("deg", 30.0, 360.0, "270 deg")]
+RAILS = ("supply", "reference", "ground")
+
+
+def _read_rail(written: object) -> str | float:
+    """Return a rail's name, or its voltage above ground."""
+    if isinstance(written, str):
+        if written in RAILS:
+            return written
+        if not any(sign.isdigit() for sign in written):
+            raise ValueError(
+                f"expected supply, reference, ground or a voltage above ground such as '2.5 V'"
+                f"{near_names(written, RAILS)}"
+            )
+    return float(within("V", 0.0, 60.0, "2.5 V").func(written))  # type: ignore[call-arg]
+
+
+Rail = Annotated[Literal["supply", "reference", "ground"] | float, BeforeValidator(_read_rail)]
 
 
 class DividerReference(Part):
@@ -166,13 +184,22 @@ class PlainKnob(Part):
     fastest_hz: Hertz = Field(alias="fastest")
     travel_degrees: Degrees = Field(default=300.0, alias="travel")
 
+    @model_validator(mode="after")
+    def _check_ends(self) -> PlainKnob:
+        if self.slowest_hz > self.fastest_hz:
+            raise ValueError(
+                f"slowest = {self.slowest_hz:g} Hz is faster than "
+                f"fastest = {self.fastest_hz:g} Hz; swap them"
+            )
+        return self
+
 
 class SineOscillator(Part):
     """A sine at the tap, about a mean level, from a low impedance."""
 
     kind: Literal["sine"]
     mean_v: SignedVolts = Field(alias="mean")
-    peak_v: RailVolts = Field(alias="peak")
+    peak_v: PeakVolts = Field(alias="peak")
     knob: PlainKnob
 
 
@@ -184,6 +211,15 @@ class MeasuredOscillator(Part):
     high_v: SignedVolts = Field(alias="high")
     shape: Literal["triangle", "sine"] = "triangle"
     knob: PlainKnob
+
+    @model_validator(mode="after")
+    def _check_ends(self) -> MeasuredOscillator:
+        if self.low_v >= self.high_v:
+            raise ValueError(
+                f"low = {self.low_v:g} V is not below high = {self.high_v:g} V, both from the "
+                "reference rail; swap them or measure again"
+            )
+        return self
 
 
 Oscillator = Annotated[
@@ -200,9 +236,9 @@ class Trimmer(Part):
     """
 
     track_ohm: Ohms = Field(alias="track")
-    top: Literal["supply", "reference", "ground"] | RailVolts
+    top: Rail
     top_ohm: EndOhms = Field(default=0.0, alias="top_resistor")
-    bottom: Literal["supply", "reference", "ground"] | RailVolts
+    bottom: Rail
     bottom_ohm: EndOhms = Field(default=0.0, alias="bottom_resistor")
     travel_degrees: Degrees = Field(default=270.0, alias="travel")
     turns: int = Field(default=1, ge=1, le=50, strict=True)
@@ -259,25 +295,45 @@ class Circuit(Part):
 
     @model_validator(mode="after")
     def _check_whole(self) -> Circuit:
+        faults = [*self._feedback_faults(), *self._rail_faults()]
+        if faults:
+            raise ValueError("\n".join(faults))
+        return self
+
+    def _feedback_faults(self) -> Iterator[str]:
         loop = self.feedback
-        if loop is not None:
-            if max(loop.from_stage, loop.into_stage) > len(self.stages):
-                raise ValueError(
-                    f"feedback joins stages {loop.from_stage} and {loop.into_stage}, but the "
-                    f"circuit has {len(self.stages)} stages; stages count from 1"
-                )
-            if loop.into_stage > loop.from_stage:
-                raise ValueError(
-                    f"feedback.from = {loop.from_stage} lies before feedback.into = "
-                    f"{loop.into_stage}; feedback leads back from a later stage, swap them"
-                )
+        if loop is None:
+            return
+        if max(loop.from_stage, loop.into_stage) > len(self.stages):
+            yield (
+                f"feedback joins stages {loop.from_stage} and {loop.into_stage}, but the "
+                f"circuit has {len(self.stages)} stages; stages count from 1"
+            )
+        if loop.into_stage > loop.from_stage:
+            yield (
+                f"feedback.from = {loop.from_stage} lies before feedback.into = "
+                f"{loop.into_stage}; feedback leads back from a later stage, swap them"
+            )
+
+    def _rail_faults(self) -> Iterator[str]:
         low, high = self.rails_v
         if not low < 0.0 < high:
-            raise ValueError(
+            yield (
                 f"the op amps' outputs reach from {low:+.2f} V to {high:+.2f} V about the "
                 "reference rail, which must lie between; check supply.reference and opamp.headroom"
             )
-        return self
+        trimmer, supply_v = self.bus.trimmer, self.supply.voltage_v
+        for end, rail in (("top", trimmer.top), ("bottom", trimmer.bottom)):
+            if not isinstance(rail, str) and rail > supply_v:
+                yield (
+                    f"bus.trimmer.{end} = {rail:g} V is above the supply of {supply_v:g} V; give a "
+                    "rail's name or a voltage within the supply"
+                )
+        if trimmer.top == trimmer.bottom:
+            yield (
+                f"bus.trimmer.top and bus.trimmer.bottom are both {trimmer.top!r}, so the trimmer "
+                "moves nothing; give its two different ends"
+            )
 
     @property
     def stage_count(self) -> int:
@@ -408,9 +464,18 @@ def load_circuit(name_or_path: str | Path) -> Circuit:
     if text in shipped and not path.is_file():
         return parse_circuit(tomllib.loads(shipped[text]()), text)
     looks_like_file = path.suffix.lower() == ".toml" or "/" in text or "\\" in text
-    if not path.exists() and not looks_like_file:
+    if not looks_like_file and not (text and _exists(path)):
+        wanted = text if len(text) <= 60 else text[:50] + "..."
         raise InputError(
-            f"no circuit named {text!r}{near_names(text, shipped)}; shipped circuits: "
+            f"no circuit named {wanted!r}{near_names(wanted, shipped)}; shipped circuits: "
             f"{', '.join(shipped)}; or give a circuit file (.toml)"
         )
     return parse_circuit(read_toml(path, "circuit file"), str(path))
+
+
+def _exists(path: Path) -> bool:
+    """Whether there is such a file; a name the system refuses is none."""
+    try:
+        return path.exists()
+    except (OSError, ValueError):
+        return False

@@ -71,27 +71,84 @@ def explain_faults(fault: ValidationError, source: str, model: type[BaseModel]) 
         The schema the file was held against.
     """
     messages = []
-    for error in fault.errors(include_url=False):
+    errors = fault.errors(include_url=False)
+    for error in errors:
+        if _follows_from_others(error, errors):
+            continue
         path, parent = _follow(model, error["loc"])
-        kind = error["type"]
-        if kind == "extra_forbidden":
-            known = _keys_of(parent)
-            hint = near_names(str(error["loc"][-1]), known)
-            text = f"unknown key{hint}" + (f"; known here: {', '.join(known)}" if known else "")
-        elif kind == "missing":
-            text = "missing; this key is needed"
-        elif kind == "union_tag_not_found":
-            text = f"needs the key {error['ctx']['discriminator']}, which tells its kind"
-        elif kind == "union_tag_invalid":
-            context = error["ctx"]
-            text = f"kind = {context['tag']!r} is not known; expected {context['expected_tags']}"
-        else:
-            text = error["msg"].removeprefix("Value error, ")
-            given = error.get("input")
-            if isinstance(given, str | int | float) and not isinstance(given, bool):
-                text = f"= {given!r}: {text}"
-        messages.append(f"{source}: {path} {text}" if path else f"{source}: {text}")
+        for text in _explain(error, parent).split("\n"):
+            # "= value" belongs to the key; a sentence stands after a colon.
+            joint = " " if text.startswith(("= ", "kind = ")) else ": "
+            messages.append(f"{source}: {path}{joint}{text}" if path else f"{source}: {text}")
     return messages
+
+
+# What pydantic calls a fault, and how it is said to someone with a schematic.
+_PLAIN_WORDS = {
+    "int_type": "expected a whole number without quotes",
+    "int_from_float": "expected a whole number",
+    "string_type": "expected text in quotes",
+    "string_too_short": "is empty; expected text in quotes",
+    "string_too_long": "is too long; at most {max_length} characters",
+    "greater_than_equal": "must be {ge} or more",
+    "less_than_equal": "must be {le} or less",
+    "model_type": "expected a table of keys",
+    "model_attributes_type": "expected a table of keys",
+    "dict_type": "expected a table of keys",
+    "tuple_type": "expected a list",
+    "literal_error": "expected {expected}",
+}
+
+
+def _explain(error: Any, parent: Any) -> str:
+    """Return what is wrong with one key, without its place."""
+    kind, context = error["type"], error.get("ctx", {})
+    given = error.get("input")
+    if kind == "extra_forbidden":
+        known = _keys_of(parent)
+        hint = near_names(str(error["loc"][-1]), known)
+        return f"unknown key{hint}" + (f"; known here: {', '.join(known)}" if known else "")
+    if kind == "missing":
+        return "missing; this key is needed"
+    if kind == "union_tag_not_found":
+        return f"needs the key {context['discriminator']}, which tells its kind"
+    if kind == "union_tag_invalid":
+        return f"kind = {context['tag']!r} is not known; expected {context['expected_tags']}"
+    if kind in ("too_short", "too_long"):
+        least, most = context.get("min_length"), context.get("max_length")
+        wanted = f"at least {least}" if kind == "too_short" else f"at most {most}"
+        return f"there are {_length(given)}; expected {wanted}"
+    if kind in _PLAIN_WORDS:
+        text = _PLAIN_WORDS[kind].format(**context)
+    else:
+        text = str(error["msg"]).removeprefix("Value error, ")
+    if (
+        isinstance(given, str | int | float)
+        and not isinstance(given, bool)
+        and not text.startswith(repr(given))
+    ):
+        text = f"= {_shortened(given)}: {text}"
+    return text
+
+
+def _follows_from_others(error: Any, errors: list[Any]) -> bool:
+    """Whether a list only seems too short because entries of it have faults of their own."""
+    if error["type"] != "too_short":
+        return False
+    place = error["loc"]
+    beneath = any(
+        other["loc"][: len(place)] == place and len(other["loc"]) > len(place) for other in errors
+    )
+    return beneath and _length(error["input"]) >= error["ctx"]["min_length"]
+
+
+def _length(given: Any) -> int:
+    return len(given) if isinstance(given, list | tuple) else 0
+
+
+def _shortened(given: object) -> str:
+    text = repr(given)
+    return text if len(text) <= 60 else text[:50] + "..."
 
 
 def read_toml(path: Path, what: str) -> dict[str, Any]:

@@ -273,14 +273,14 @@ def test_all_faults_of_a_file_are_reported_with_their_place() -> None:
     with pytest.raises(InputError) as caught:
         parse_fixture(data, "f.toml")
     text = str(caught.value)
-    assert "f.toml: reading.servo_10k the reference of 9.5 V must lie between" in text
-    assert "f.toml: reading.servo.resistor missing" in text
-    assert "f.toml: reading.servo.resistr unknown key; did you mean resistor" in text
-    assert "f.toml: reading.servo.meter missing" in text
+    assert "f.toml: reading.servo_10k: the reference of 9.5 V must lie between" in text
+    assert "f.toml: reading.servo.resistor: missing" in text
+    assert "f.toml: reading.servo.resistr: unknown key; did you mean resistor" in text
+    assert "f.toml: reading.servo.meter: missing" in text
     assert "f.toml: reading.x kind = 'magic' is not known" in text
-    assert "f.toml: reading.y give either drain, or supply with resistor" in text
-    assert "f.toml: reading.z meter counts are in V, but this reading is in A" in text
-    assert "f.toml: celsius = 'hot'" in text
+    assert "f.toml: reading.y: give either drain, or supply with resistor" in text
+    assert "f.toml: reading.z: meter counts are in V, but this reading is in A" in text
+    assert "f.toml: celsius: 'hot'" in text
 
 
 @pytest.mark.parametrize("name", ["note", "Part", "a b", "servo.10k", "1k"])
