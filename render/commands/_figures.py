@@ -76,10 +76,7 @@ def bias_rows(record: dict[str, Any]) -> list[tuple[str, str]]:
         ("reference rail above ground", f"{rail:.2f} V"),
         ("trimmer wiper above ground, mean", f"{record['wiper_above_ground_v']:.3f} V"),
         ("gate bus re reference, low / mean / high", about_rail),
-        (
-            "gate bus above ground, low / mean / high",
-            " / ".join(f"{rail + v:.3f} V" for v in gates),
-        ),
+        ("gate bus above ground, low / mean / high", about_ground),
         ("travel", f"{record['travel_octaves']:.2f} octaves"),
         ("stagger", f"{record['stagger_octaves']:.3f} octave"),
         ("stall", percent(record["stall"])),
