@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Callable, Iterator
+from functools import partial
 from importlib.resources import files
 from pathlib import Path
 from typing import Annotated, Any, Literal
@@ -388,7 +389,8 @@ class Circuit(Part):
             ``bus__sweep_ohm=2.2e6`` or ``supply__voltage_v=8.4``; stages by index,
             ``stages__0__capacitor_f``.
         """
-        return replace_fields(self, changes)
+        changed: Circuit = replace_fields(self, changes)
+        return changed
 
 
 def replace_fields(part: Any, changes: dict[str, Any]) -> Any:
@@ -437,11 +439,11 @@ def parse_circuit(data: dict[str, Any], source: str) -> Circuit:
 def shipped_circuits() -> dict[str, Callable[[], str]]:
     """Return the shipped circuits' names, each with a function reading its text."""
     folder = files("sweepset.models.library")
-    found = {}
+    found: dict[str, Callable[[], str]] = {}
     for entry in sorted(folder.iterdir(), key=lambda item: item.name):
         if entry.name.startswith("circuit_") and entry.name.endswith(".toml"):
             name = entry.name.removeprefix("circuit_").removesuffix(".toml")
-            found[name] = lambda entry=entry: entry.read_text(encoding="utf-8")
+            found[name] = partial(entry.read_text, encoding="utf-8")
     return found
 
 

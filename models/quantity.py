@@ -156,7 +156,7 @@ def format_quantity(value: float, unit: str, digits: int = 3) -> str:
     from quantiphy import Quantity
 
     quantity = Quantity(value + 0.0, rule.shown)
-    with quantity.prefs(output_sf="GMkmunp", map_sf={}, strip_zeros=True, spacer=" "):
+    with quantity.prefs(output_sf="GMkmunp", map_sf={}, strip_zeros=True, spacer=" "):  # type: ignore[no-untyped-call]
         return str(quantity.render(form="si", prec=digits - 1))
 
 
