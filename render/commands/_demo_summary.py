@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import math
+import textwrap
+from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
 from ._cautions import CAUTIONS
 from ._figures import percent, trimmer_text
+
+WIDTH = 96
 
 if TYPE_CHECKING:
     from ...models.choosing import SetFigures
@@ -60,7 +64,10 @@ def summary_text(
         lines += ["", f"The {name} set", *_set_lines(tray, circuit, figures)]
     lines += ["", "Where to listen first", *_listening_lines(cycles, seconds)]
     lines += ["", "How to read the figures", *_FIGURES, "", "Cautions"]
-    lines += [f"  - {caution}" for caution in CAUTIONS]
+    for caution in CAUTIONS:
+        lines += textwrap.wrap(
+            caution, WIDTH, initial_indent="  - ", subsequent_indent="    ", break_on_hyphens=False
+        )
     return "\n".join(lines) + "\n"
 
 
@@ -101,42 +108,42 @@ def _set_lines(tray: Tray, circuit: Circuit, figures: SetFigures) -> list[str]:
 def _listening_lines(
     cycles: dict[str, list[tuple[str, BusWave, Cycle]]], seconds: float
 ) -> list[str]:
+    travels = " and ".join(
+        f"{at_rates[len(at_rates) // 2][2].travel_octaves:.2f} octaves ({name})"
+        for name, at_rates in cycles.items()
+    )
     lines = [
-        "  Mismatch is heard at the turnarounds, where the sweep reverses: a matched set turns as",
-        "  one, in a mismatched one some stages have stopped while others still move. Seconds from",
-        "  the start of the take:",
+        "  At the turnarounds, where the sweep reverses: stages that match turn as one, others",
+        "  stop or lag while the rest still move. Then over a whole cycle: the notches travel",
+        f"  {travels}. Seconds from the start of the take, with the notches",
+        "  lowest (L) or highest (H):",
     ]
     for name, at_rates in cycles.items():
         for rate, bus, cycle in at_rates:
-            lines.append(
-                f"  {name} {rate} ({bus.rate_hz:.2f} Hz): "
-                + ", ".join(
-                    f"{time:.2f}" for time in turnarounds(cycle.turnaround_s, bus.period_s, seconds)
-                )
-            )
+            turns = [
+                f"{time:.2f} {'H' if bus.gate_v([time])[0] > bus.mean_v else 'L'}"
+                for time in turnarounds(cycle.turnaround_s, bus.period_s, seconds)
+            ]
+            lines.append(f"  {name} {rate} ({bus.rate_hz:.2f} Hz): {', '.join(turns)}")
     return lines
 
 
-def turnarounds(first_s: Sequence[float], period_s: float, seconds: float) -> list[float]:
+def turnarounds(first_s: Iterable[float], period_s: float, seconds: float) -> list[float]:
     """Return the first six turnarounds of a take, those at its very start left out [s].
 
     Parameters
     ----------
-    first_s : sequence of float
+    first_s : iterable of float
         Turnarounds of the first cycle [s].
     period_s : float
         The oscillator's period [s].
     seconds : float
         Length of the take [s].
     """
-    found: list[float] = []
-    cycle = 0
-    while cycle * period_s < seconds and len(found) < 6:
-        # The sound must have begun for a turn to be heard.
-        found += [
-            float(turn) + cycle * period_s
-            for turn in first_s
-            if 0.1 < turn + cycle * period_s < seconds
-        ]
-        cycle += 1
-    return found[:6]
+    # The sound must have begun for a turn to be heard.
+    each = (
+        float(turn) + cycle * period_s
+        for cycle in range(math.ceil(seconds / period_s))
+        for turn in sorted(first_s)
+    )
+    return [time for time in each if 0.1 < time < seconds][:6]

@@ -3,8 +3,15 @@
 from __future__ import annotations
 
 import argparse
+from typing import TYPE_CHECKING
 
 from ._settings import DEFAULT_CIRCUIT
+
+if TYPE_CHECKING:
+    from ...models.choosing import SetFigures
+    from ...models.circuit import Circuit
+    from ...models.quantity import Setting
+    from ..setup import TakeSettings
 
 HELP = "do the whole job on shipped data and write what comes of it into a folder"
 EPILOG = """\
@@ -52,11 +59,10 @@ def run(args: argparse.Namespace) -> int:
     from ...models.cycle import Cycle, analyse_cycle
     from ...models.estimate import estimate_tray
     from ...models.gatebus import BusWave
-    from ...models.quantity import parse_rate, parse_trim
+    from ...models.quantity import parse_rate
     from ...models.tray import find_fixture, load_tray
     from ..audio import check_audio
-    from ..audition import audition_takes, file_names, render_audition
-    from ..setup import TakeSettings
+    from ..audition import AuditionTake, file_names, render_audition
     from ._demo_folder import DemoFolder
     from ._demo_summary import summary_text
     from ._screen import progress, say, warn
@@ -81,8 +87,12 @@ def run(args: argparse.Namespace) -> int:
             estimate, circuit, middle, avoid=matched.labels, labels=tray.free_labels
         )
         sets = {"matched": matched, "mismatched": mismatched}
-        base = TakeSettings(circuit, matched.jfets, parse_trim("auto"), middle)
-        takes = audition_takes(base, {name: one.jfets for name, one in sets.items()}, rates)
+        takes = [AuditionTake("dry", _settings_of(circuit, matched, middle, dry=True))]
+        takes += [
+            AuditionTake(f"{name} {rate.text}", _settings_of(circuit, one, rate))
+            for name, one in sets.items()
+            for rate in rates
+        ]
         made = render_audition(riff, folder.path, takes, overwrite=True, progress=tell)
         cycles: dict[str, list[tuple[str, BusWave, Cycle]]] = {name: [] for name in sets}
         for name, setup in zip(made.names, made.setups, strict=True):
@@ -109,3 +119,14 @@ def run(args: argparse.Namespace) -> int:
         say(f"  {take.path.name}")
     say("  summary.txt (read this first)")
     return 0
+
+
+def _settings_of(
+    circuit: Circuit, one: SetFigures, rate: Setting, *, dry: bool = False
+) -> TakeSettings:
+    """Return a take's settings, the trimmer where choosing the set has found it."""
+    from ...models.quantity import Setting
+    from ..setup import TakeSettings
+
+    trimmer = Setting("auto, solved at noon", one.bias.position, None)
+    return TakeSettings(circuit, one.jfets, trimmer, rate, dry=dry)
