@@ -38,7 +38,7 @@ OPAMP_GAIN = 1e7
 # The oscillator's op amp switches through this time constant; a comparator without any
 # would have to jump within one step. It delays each turn by about as much.
 SWITCH_S = 1e-6
-SWITCH_GAIN = 1e4
+SWITCH_GAIN = 1e6
 # A wiper at the end of its track: simulators refuse resistors of exactly 0.
 LEAST_OHM = 1e-3
 # Saturation current of the gate junctions: usual for small-signal types (the customary

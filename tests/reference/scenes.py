@@ -59,12 +59,12 @@ class Pluck:
     def lines(self, node: str, other: str) -> list[str]:
         """Return SPICE lines driving `node` against `other` with the same signal.
 
-        Current sources into one ohm: seventy-two voltage sources in series would be as
-        many more unknowns.
+        Current sources into one ohm, copied by a source of no resistance: seventy-two voltage
+        sources in series would be as many more unknowns.
         """
-        lines = [f"RSUM {node} {other} 1"]
+        lines = [f"RSUM drive {other} 1", f"ESUM {node} {other} drive {other} 1"]
         for number, (level, hz, decay) in enumerate(self.table):
-            lines.append(f"I{number} {other} {node} SIN(0 {level:.9g} {hz:.9g} 0 {decay:.9g})")
+            lines.append(f"I{number} {other} drive SIN(0 {level:.9g} {hz:.9g} 0 {decay:.9g})")
         return lines
 
 
@@ -288,15 +288,15 @@ CHAIN_SCENES = (
 UNIT_SCENES = (
     Scene(
         "unit_buffered", "the whole unit, buffered relaxation oscillator",
-        FOUR, parts(CLOSE, DEFAULT_KNEE_V), seconds=0.4, trimmer=0.6, rate="4Hz",
+        FOUR, parts(CLOSE, DEFAULT_KNEE_V), seconds=0.4, trimmer=0.4, rate="4Hz",
     ),
     Scene(
         "unit_direct", "the whole unit, the bus loading the timing capacitor, knee 0",
-        FOUR_DIRECT, parts(CLOSE), seconds=0.4, trimmer=0.55, rate="5Hz",
+        FOUR_DIRECT, parts(CLOSE), seconds=0.4, trimmer=0.42, rate="5Hz",
     ),
     Scene(
         "unit_triangle", "the whole unit, triangle oscillator, three stages, knee 0",
-        THREE_TRIANGLE, parts(APART[:3], lambda_per_v=0.02), seconds=0.4, trimmer=0.6, rate="4Hz",
+        THREE_TRIANGLE, parts(APART[:3], lambda_per_v=0.02), seconds=0.4, trimmer=0.4, rate="4Hz",
     ),
 )  # fmt: skip
 
