@@ -76,7 +76,9 @@ def read_raw(data: bytes) -> dict[str, Array]:
         size = count * points * np.dtype(kind).itemsize
         table = np.frombuffer(data[:size], kind).reshape(points, count)
         data = data[size:]
-        found = {name.lower(): table[:, i].copy() for i, name in enumerate(names)}
+        # "i(@j1[id])" is a device's current under another name.
+        names = [re.sub(r"^i\((@.*)\)$", r"\1", name.lower()) for name in names]
+        found = {name: table[:, i].copy() for i, name in enumerate(names)}
     return found
 
 
