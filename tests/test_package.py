@@ -2,6 +2,7 @@
 
 import ast
 import os
+import re
 import shutil
 import statistics
 import subprocess
@@ -204,3 +205,16 @@ def test_version_is_stated_once():
 
     declared = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]["version"]
     assert declared == sweepset.__version__
+
+
+def test_developers_page_names_every_dependency_and_module():
+    page = (ROOT / "DEVELOPERS.md").read_text(encoding="utf-8")
+    project = tomllib.loads((ROOT / "pyproject.toml").read_text(encoding="utf-8"))["project"]
+    for requirement in project["dependencies"]:
+        assert re.split(r"[<>=]", requirement)[0] in page, requirement
+    architecture = page[page.index("## Architecture") : page.index("## Rules of the house")]
+    for folder in ("models", "render"):
+        for path in (ROOT / folder).glob("*.py"):
+            if path.name == "__init__.py" or path.stem.endswith("_kernels"):
+                continue
+            assert re.search(rf"\b{path.stem}\b", architecture), f"{folder}/{path.name} is missing"
