@@ -15,9 +15,7 @@ PROGRAMS = {"ngspice": ("ngspice", "ngspice"), "browser": ("chromium", "chromium
 settings.register_profile(
     "sweepset", deadline=None, suppress_health_check=[HealthCheck.too_slow], max_examples=60
 )
-settings.register_profile(
-    "ci", settings.get_profile("sweepset"), derandomize=True, print_blob=True
-)
+settings.register_profile("ci", settings.get_profile("sweepset"), derandomize=True, print_blob=True)
 settings.load_profile("ci" if os.environ.get("CI") else "sweepset")
 
 SAMPLES = Path(__file__).resolve().parents[1] / "samples"
