@@ -7,6 +7,7 @@ at its top only what costs nothing, so that ``sweepset --help`` is instant.
 from __future__ import annotations
 
 import argparse
+import errno
 import os
 import re
 import sys
@@ -24,6 +25,8 @@ EXIT_INPUT = 2
 EXIT_INTERRUPTED = 130  # 128 + SIGINT, as shells have it
 EXIT_CLOSED_PIPE = 141  # 128 + SIGPIPE
 TRACEBACK = "SWEEPSET_TRACEBACK"
+# A file that a command writes has its own message; this is for its output into a file.
+FULL = (errno.ENOSPC, errno.EDQUOT)
 
 EPILOG = """\
 examples:
@@ -82,11 +85,13 @@ def main(argv: Sequence[str] | None = None) -> int:
         _say("interrupted; nothing half-written is left behind")
         return EXIT_INTERRUPTED
     except BrokenPipeError:
-        # The reader has gone; the interpreter must not complain of it at exit.
-        with suppress(OSError, ValueError):
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _abandon_output()  # the reader has gone
         return EXIT_CLOSED_PIPE
     except Exception as fault:
+        if isinstance(fault, OSError) and fault.errno in FULL:
+            _abandon_output()
+            _say("what should be printed cannot be written: the disk is full; make room")
+            return EXIT_INPUT
         if os.environ.get(TRACEBACK) == "1":
             raise
         _say(
@@ -125,6 +130,12 @@ def _parser() -> argparse.ArgumentParser:
 def _say(message: str) -> None:
     with suppress(OSError, ValueError):
         print(f"sweepset: {message}", file=sys.stderr, flush=True)
+
+
+def _abandon_output() -> None:
+    """Drop what is still to be printed; the interpreter must not complain of it at exit."""
+    with suppress(OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _forgive_console(stream: IO[str]) -> None:

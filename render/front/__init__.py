@@ -16,7 +16,7 @@ _HOMES = {
     "render_take": "sweepset.render.take",
 }
 
-__all__ = ["__version__", *sorted(_HOMES)]
+__all__ = ["Jfet", "__version__", "load_circuit", "load_tray", "render_take"]
 
 
 def __getattr__(name: str) -> Any:
