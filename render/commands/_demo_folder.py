@@ -8,7 +8,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ...models.atomic import atomic_path, write_text_atomically
+from ...models.atomic import atomic_path, check_target, write_text_atomically
 from ...models.errors import InputError
 
 if TYPE_CHECKING:
@@ -34,9 +34,9 @@ class DemoFolder:
     def __init__(self, path: Path) -> None:
         self.path = path
         self._known: dict[str, str] = {}
+        if path.is_file():
+            raise InputError(f"{path}: is a file; give a folder with --out")
         try:
-            if path.exists() and not path.is_dir():
-                raise InputError(f"{path}: is a file; give a folder with --out")
             text = (path / MANIFEST).read_text(encoding="utf-8")
         except FileNotFoundError:
             return
@@ -62,6 +62,14 @@ class DemoFolder:
         InputError
             With every such file.
         """
+        # Told now, not after the sets have been chosen.
+        if not self.path.parent.is_dir():
+            raise InputError(
+                f"{self.path}: the folder {self.path.parent} does not exist; make it or give "
+                "another with --out"
+            )
+        if self.path.is_dir():
+            check_target(self.path / MANIFEST)
         names = ["summary.txt", MANIFEST, *takes]
         names += [str(Path(name).with_suffix(".json")) for name in takes]
         self._refuse(name for name in names if not self._may_replace(name))
