@@ -1,1 +1,1 @@
-"""Speed, measured: ratios in one run against named yardsticks. ``python -m benchmarks`` runs all."""
+"""Speed, measured: ratios in one run against yardsticks. ``python -m benchmarks`` runs all."""

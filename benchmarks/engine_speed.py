@@ -73,7 +73,7 @@ def bare_chain(steps: int = 48_000) -> list[Row]:
             )
             rows.append(row("chain alone re C", law, spent_c / spent, "ratio"))
         sections = np.array([[0.9, -0.2, 0.1, 1.0, -0.3, 0.1]] * 2)
-        floor = best(lambda a=x: sosfilt(sections, a, axis=0))  # type: ignore[misc]
+        floor = best(lambda s=sections, a=x: sosfilt(s, a, axis=0))  # type: ignore[misc]
         rows.append(
             row("cost re two fixed biquads (scipy sosfilt), 32 lanes", law, spent / floor, "ratio")
         )
@@ -85,7 +85,13 @@ def _c_yardstick(runner: Any, x: Any, gate: Any, knee_v: float) -> float | None:
     source = Path(__file__).with_name("chain_yardstick.c")
     with tempfile.TemporaryDirectory() as folder:
         library = Path(folder) / "yardstick.so"
-        flags = "-O3 -march=native -ffp-contract=fast -fno-math-errno -fno-trapping-math".split()
+        flags = [
+            "-O3",
+            "-march=native",
+            "-ffp-contract=fast",
+            "-fno-math-errno",
+            "-fno-trapping-math",
+        ]
         sizes = [f"-DS={runner.stages}", f"-DL={runner.lanes}", f"-DSOFT={int(knee_v > 0)}"]
         command = [
             "gcc",

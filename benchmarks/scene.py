@@ -1,10 +1,9 @@
-"""The scene all rows share: four stages with feedback, 47 nF, 24k, the gate sweeping through cut-off."""
+"""The scene all rows share: four stages with feedback, 47 nF, 24k, gate beyond cut-off."""
 
 from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
-
 from sweepset.models.circuit import Circuit, load_circuit
 from sweepset.models.jfet import DEFAULT_KNEE_V, Jfet
 from sweepset.render.engine import Engine
@@ -21,7 +20,7 @@ KNEES_V = {"pure law": 0.0, "default knee": DEFAULT_KNEE_V}
 
 
 def circuit(stages: int = 4) -> Circuit:
-    """Return the heron circuit with this many equal stages, the last feeding back into the first."""
+    """Return heron with this many equal stages, the last feeding back into the first."""
     base = load_circuit("heron")
     changes = {
         "stages": (base.stages[0],) * stages,

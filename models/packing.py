@@ -119,7 +119,7 @@ def pack_sets(
     simple = int(stands.sum()) // count
     if pool.shape[0] == 0:
         return _packed(grid, pool, 0 if complete else simple, _REASON[0], 0, ~stands)
-    columns, dual, optimum = _relax(pool, parts, rounds)
+    _, dual, optimum = _relax(pool, parts, rounds)
     bound, reason = simple, _REASON[1] if complete else _REASON[3]
     if all_listed:
         relaxed = math.floor(optimum + 1e-6)
@@ -247,7 +247,7 @@ def _incidence(sets: Index, parts: int):  # type: ignore[no-untyped-def]
 
 
 def _figures(grid: SweepGrid, sets: Index) -> tuple[Array, Array, Array, Index]:
-    """Return expected stagger, travel, stall and place of sets at own bias; stagger inf if short."""
+    """Return stagger, travel, stall and place of sets at own bias; stagger inf if short."""
     places, travel, stall, _ = grid.own_bias(sets)
     stagger = np.zeros(sets.shape[0])
     for q in np.unique(places):
