@@ -33,7 +33,16 @@ def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
 @pytest.hookimpl(wrapper=True)
 def pytest_runtest_makereport(item: pytest.Item):
     """Turn any skip into a failure where every test must run."""
-    report = yield
+    return _no_skip((yield))
+
+
+@pytest.hookimpl(wrapper=True)
+def pytest_make_collect_report(collector: pytest.Collector):
+    """Turn the skip of a whole file into a failure where every test must run."""
+    return _no_skip((yield))
+
+
+def _no_skip(report):
     if REQUIRE_ALL and report.skipped and not hasattr(report, "wasxfail"):
         report.outcome = "failed"
         report.longrepr = f"skipped where every test must run: {report.longrepr}"
