@@ -279,8 +279,9 @@ class Jfet:
     def channel_resistance(self, gate_v: ArrayLike) -> Array:
         """Return the small-signal channel resistance at zero drain voltage [ohm].
 
-        Infinite where the channel is wholly off (knee 0, gate at or beyond cut-off).
+        Infinite where the channel is wholly off (knee 0, gate at or beyond cut-off) or so far
+        off that the resistance exceeds what a double holds.
         """
         conductance = self.channel_conductance(gate_v)
-        with np.errstate(divide="ignore"):
+        with np.errstate(divide="ignore", over="ignore"):
             return 1.0 / conductance
