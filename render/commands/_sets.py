@@ -156,7 +156,9 @@ def named_sets(written: Sequence[str]) -> tuple[list[str], list[str]]:
     InputError
         If two sets have the same name, or a name is empty.
     """
-    names, parts, faults = [], [], []
+    names: list[str] = []
+    parts: list[str] = []
+    faults: list[str] = []
     for number, text in enumerate(written, start=1):
         name, equals, labels = text.partition("=")
         name, labels = (name.strip(), labels) if equals else (f"set {number}", text)

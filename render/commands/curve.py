@@ -34,42 +34,37 @@ def run(args: argparse.Namespace) -> int:
 
     tray = read_tray(args)
     estimate = estimate_tray(tray)
-    errors = estimate.standard_errors()
-    records = []
-    for place, label in enumerate(estimate.labels):
-        jfet, report = estimate.jfet(label), estimate.reports[place]
+    contradictions = [one.contradiction for one in estimate.reports if one.contradiction]
+    warn([*tray.cautions, *contradictions])
+    records, rows = [], []
+    for jfet, (cutoff_error_v, ln_beta_error), report in zip(
+        estimate.jfets(estimate.labels), estimate.standard_errors(), estimate.reports, strict=True
+    ):
+        beta_error = jfet.beta_a_per_v2 * math.expm1(float(ln_beta_error))
         records.append(
             {
-                "part": label,
+                "part": jfet.label,
                 "cutoff_v": jfet.cutoff_v,
-                "cutoff_error_v": float(errors[place, 0]),
+                "cutoff_error_v": float(cutoff_error_v),
                 "beta_a_per_v2": jfet.beta_a_per_v2,
-                "beta_error_share": math.expm1(float(errors[place, 1])),
+                "beta_error_a_per_v2": beta_error,
                 "lambda_per_v": jfet.lambda_per_v,
                 "idss_a": jfet.idss_a,
                 "basis": report.basis,
                 "contradiction": report.contradiction,
             }
         )
-    warn(
-        [
-            *tray.cautions,
-            *(report.contradiction for report in estimate.reports if report.contradiction),
-        ]
-    )
+        rows.append(
+            (
+                jfet.label,
+                f"{jfet.cutoff_v:.3f} +/- {cutoff_error_v:.3f}",
+                f"{1e3 * jfet.beta_a_per_v2:.3f} +/- {1e3 * beta_error:.3f}",
+                f"{1e3 * jfet.idss_a:.2f}",
+                report.basis,
+            )
+        )
     if args.json:
         print_json({"common_errors": estimate.common_names, "parts": records})
-        return 0
-    rows = [
-        (
-            record["part"],
-            f"{record['cutoff_v']:.3f} +/- {record['cutoff_error_v']:.3f}",
-            f"{1e3 * record['beta_a_per_v2']:.3f} +/- "
-            f"{1e3 * record['beta_a_per_v2'] * record['beta_error_share']:.3f}",
-            f"{1e3 * record['idss_a']:.2f}",
-            record["basis"],
-        )
-        for record in records
-    ]
-    print_table("", ("part", "cut-off V", "current factor mA/V^2", "Idss mA", "from"), rows)
+    else:
+        print_table("", ("part", "cut-off V", "current factor mA/V^2", "Idss mA", "from"), rows)
     return 0
