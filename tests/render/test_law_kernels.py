@@ -1,9 +1,8 @@
 """The kernel's polynomials against numpy's exp and log1p (an independent library)."""
 
-import numpy as np
 import numba
+import numpy as np
 import pytest
-
 from sweepset.models import jfet
 from sweepset.render import law_kernels
 

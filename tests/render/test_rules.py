@@ -3,7 +3,6 @@
 import numpy as np
 import pytest
 from scipy.linalg import expm
-
 from sweepset.models.circuit import load_circuit
 from sweepset.render.rules import (
     ADAMS_3,
