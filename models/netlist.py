@@ -36,8 +36,9 @@ from .knob import knob_ohm
 # simulator's own rounding, times it, stays below that.
 OPAMP_GAIN = 1e7
 # The oscillator's op amp switches through this time constant; a comparator without any
-# would have to jump within one step. It delays each turn by about as much.
-SWITCH_S = 1e-6
+# would have to jump within one step. It delays each turn by about as much, which at 1e-6 s
+# would already show in the comparison with the engine (-87 dB).
+SWITCH_S = 1e-7
 SWITCH_GAIN = 1e6
 # A wiper at the end of its track: simulators refuse resistors of exactly 0.
 LEAST_OHM = 1e-3
@@ -376,7 +377,7 @@ def _opamp(circuit: Circuit) -> list[str]:
     assert math.isfinite(start_v)
     return [
         *lines,
-        "* The oscillator's op amp: from end to end within a microsecond or so",
+        "* The oscillator's op amp: from end to end within a fraction of a microsecond",
         f".subckt {name} plus minus out",
         f"B1 fast 0 V={{min(max({SWITCH_GAIN:.0e}*V(plus,minus),{_number(low)}),{_number(high)})}}",
         "R1 fast slow 1k",
