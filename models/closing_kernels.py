@@ -171,25 +171,22 @@ def after(distance: Any, i: int, j: int, pair_distance: float, pair_key: int) ->
 
 @kernel()
 def sort_by(keys: Any, items: Any, start: int, stop: int) -> None:
-    """Sort keys[start:stop] ascending, carrying items along."""
-    if stop - start > 24:
-        order = np.argsort(keys[start:stop], kind="mergesort")
-        old_keys = keys[start:stop].copy()
-        old_items = items[start:stop].copy()
-        for n in range(stop - start):
-            keys[start + n] = old_keys[order[n]]
-            items[start + n] = old_items[order[n]]
-        return
-    for n in range(start + 1, stop):
-        key = keys[n]
-        item = items[n]
-        m = n - 1
-        while m >= start and keys[m] > key:
-            keys[m + 1] = keys[m]
-            items[m + 1] = items[m]
-            m -= 1
-        keys[m + 1] = key
-        items[m + 1] = item
+    """Sort keys[start:stop] ascending, carrying items along (Shell's method, gaps 3 n + 1)."""
+    gap = 1
+    while gap < (stop - start) // 3:
+        gap = 3 * gap + 1
+    while gap >= 1:
+        for n in range(start + gap, stop):
+            key = keys[n]
+            item = items[n]
+            m = n - gap
+            while m >= start and keys[m] > key:
+                keys[m + gap] = keys[m]
+                items[m + gap] = items[m]
+                m -= gap
+            keys[m + gap] = key
+            items[m + gap] = item
+        gap //= 3
 
 
 @kernel()

@@ -177,7 +177,7 @@ class Cloud:
         return np.asarray(square + (count - 1) / count**2 * self.own[at].sum(axis=-1))
 
 
-def cloud(parts: Parts, swept: Octaves, *, compact: bool = False) -> Cloud:
+def cloud(parts: Parts, swept: Octaves) -> Cloud:
     """Return the parts as points for one sweep.
 
     Parameters
@@ -186,8 +186,6 @@ def cloud(parts: Parts, swept: Octaves, *, compact: bool = False) -> Cloud:
         P parts.
     swept : Octaves
         Their octaves over T gate voltages equally spaced in time.
-    compact : bool
-        Drop the directions that hold under 1e-12 of the cloud's extent.
     """
     count, times = swept.level.shape
     jacobian = np.stack([-swept.per_gate_v, swept.per_ln_beta], axis=-1)  # (P, T, 2)
@@ -195,14 +193,6 @@ def cloud(parts: Parts, swept: Octaves, *, compact: bool = False) -> Cloud:
     common = (jacobian @ parts.common).reshape(count, -1)
     points = np.concatenate([swept.level - swept.level.mean(axis=0), common], axis=1)
     points /= math.sqrt(times)
-    if compact and points.shape[1] > 2:
-        points = points - points.mean(axis=0)
-        # The side with fewer entries: 60 parts at 64 instants are 400 directions or more.
-        few = count < points.shape[1]
-        power, axes = np.linalg.eigh(points @ points.T if few else points.T @ points)
-        kept = power > 1e-12 * max(float(power[-1]), 1e-300)
-        turned = axes[:, kept] * np.sqrt(power[kept]) if few else points @ axes[:, kept]
-        points = np.ascontiguousarray(turned)
     return Cloud(points=points, own=own)
 
 

@@ -90,7 +90,7 @@ class SweepGrid:
     def cloud(self, place: int) -> Cloud:
         """Return the parts as points at one position."""
         swept = Octaves(self.level[place], self.slope[place], self.per_ln_beta[place])
-        return cloud(self.parts, swept, compact=True)
+        return cloud(self.parts, swept)
 
     def own_bias(self, sets: npt.ArrayLike) -> tuple[Index, Array, Array, Array]:
         """Return place, travel and stall (S,) and objective (S, Q) of sets (S, N) at own bias."""
