@@ -463,7 +463,8 @@ class _Problem:
                 (kind.predict(channels, warmer) - kind.predict(channels, cooler)) * celsius_u / 2.0
             )
             for source in kind.error_sources(self.shown[:, column], at):
-                moved = source.shown + kind.predict(channels, source.conditions) - usual
+                moved = np.asarray(source.shown, float) - usual
+                moved = moved + kind.predict(channels, source.conditions)
                 for name, shares in _groups(source.name, source.group, self.present[:, column]):
                     table = by_factor.setdefault(name, np.zeros((count, width)))
                     table[:, column] += np.where(shares, moved, 0.0)

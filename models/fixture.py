@@ -437,7 +437,7 @@ class ServoReading(_Reading):
         current = np.asarray(conditions.reference_v) / np.asarray(conditions.resistor_ohm)
         drain = np.asarray(conditions.supply_v) - np.asarray(conditions.reference_v)
         gate = channels.at_celsius(conditions.celsius).gate_for(current, drain)
-        return np.asarray(gate + conditions.reference_v)
+        return np.asarray(gate + np.asarray(conditions.reference_v, float))
 
     def show(self, predicted: Array) -> Array:
         """Return what the meter would show: the op amp stops at its low rail [V]."""
@@ -904,7 +904,7 @@ def _newton(function: Callable[[Array], Array], start: Array) -> Array:
         value = function(x)
         slope = (function(x + step) - value) / step
         move = -value / slope
-        x = x + move
+        x = np.asarray(x + move)
         if np.all(np.abs(move) <= 1e-12 * (1.0 + np.abs(x))):
             return x
     raise ArithmeticError("a fixture reading did not converge")

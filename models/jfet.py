@@ -58,7 +58,7 @@ def overdrive(x_v: ArrayLike, knee_v: ArrayLike) -> Array:
     x, w = np.broadcast_arrays(np.asarray(x_v, float), np.asarray(knee_v, float))
     safe = np.where(w > 0.0, w, 1.0)
     soft = np.maximum(x, 0.0) + safe * np.log1p(np.exp(-np.abs(x) / safe))
-    return np.where(w > 0.0, soft, np.maximum(x, 0.0))
+    return np.asarray(np.where(w > 0.0, soft, np.maximum(x, 0.0)))
 
 
 def overdrive_slope(x_v: ArrayLike, knee_v: ArrayLike) -> Array:
@@ -90,7 +90,7 @@ def overdrive_inverse(p_v: ArrayLike, knee_v: ArrayLike) -> Array:
     """
     p, w = np.broadcast_arrays(np.asarray(p_v, float), np.asarray(knee_v, float))
     if not np.all(p > 0.0):
-        raise ValueError(f"softened overdrive must be positive, got {p_v}")
+        raise ValueError(f"softened overdrive must be positive, got {p}")
     safe = np.where(w > 0.0, w, 1.0)
     # x = w ln(exp(p/w) - 1), arranged so that neither end overflows.
     return np.asarray(np.where(w > 0.0, p + safe * np.log(-np.expm1(-p / safe)), p))
@@ -253,7 +253,8 @@ class Jfet:
         v = np.asarray(drain_v, float)
         slope = overdrive(u, self.knee_v) * overdrive_slope(u, self.knee_v)
         slope = slope - overdrive(u - v, self.knee_v) * overdrive_slope(u - v, self.knee_v)
-        return 2.0 * self.beta_a_per_v2 * (1.0 + self.lambda_per_v * np.abs(v)) * slope
+        length = 1.0 + self.lambda_per_v * np.abs(v)
+        return np.asarray(2.0 * self.beta_a_per_v2 * length * slope)
 
     def output_conductance(self, gate_v: ArrayLike, drain_v: ArrayLike) -> Array:
         """Return gds, the slope of current with drain voltage at fixed gate voltage [S]."""
@@ -263,7 +264,8 @@ class Jfet:
         square = overdrive(u, self.knee_v) ** 2 - drain_side**2
         slope = 2.0 * drain_side * overdrive_slope(u - v, self.knee_v)
         lam = self.lambda_per_v
-        return self.beta_a_per_v2 * ((1.0 + lam * np.abs(v)) * slope + lam * np.sign(v) * square)
+        whole = (1.0 + lam * np.abs(v)) * slope + lam * np.sign(v) * square
+        return np.asarray(self.beta_a_per_v2 * whole)
 
     def channel_conductance(self, gate_v: ArrayLike) -> Array:
         """Return the small-signal channel conductance at zero drain voltage [S]."""

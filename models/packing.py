@@ -22,6 +22,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 
 from .closing import Walk
 from .pairwise import Array, Index
@@ -336,7 +337,7 @@ def _solve(sets: Index, gain: Array) -> tuple[Index, float]:
     result = milp(
         -gain,
         constraints=LinearConstraint(_incidence(sets, int(sets.max()) + 1), -np.inf, 1.0),
-        integrality=np.ones(gain.size),
+        integrality=np.ones(gain.size, dtype=np.int64),
         bounds=Bounds(0.0, 1.0),
         options={"node_limit": BRANCH_NODES, "time_limit": SECONDS},
     )
@@ -358,9 +359,17 @@ def _whole(fits: _Fits, near: Index) -> tuple[Index, float]:
 
 
 def _packed(
-    grid: SweepGrid, sets: Index, bound: int, reason: str, within: int | None, lonely: Array
+    grid: SweepGrid,
+    sets: Index,
+    bound: int,
+    reason: str,
+    within: int | None,
+    lonely: npt.NDArray[np.bool_],
 ) -> Packing:
-    stagger, travel, stall, place = _figures(grid, sets) if sets.shape[0] else ([], [], [], [])
+    none = np.zeros(0)
+    stagger, travel, stall, place = (
+        _figures(grid, sets) if sets.shape[0] else (none, none, none, none.astype(np.int64))
+    )
     order = np.argsort(stagger, kind="stable")
     return Packing(
         sets=np.sort(sets, axis=1)[order],

@@ -134,7 +134,7 @@ def octaves(parts: Parts, gate_v: npt.ArrayLike, shunt_s: npt.ArrayLike) -> Octa
     curvature = np.where(knee > 0.0, slope * (1.0 - slope) / safe, 0.0)
     twice_beta = 2.0 * np.exp(parts.ln_beta)[:, None]
     channel = twice_beta * p * slope  # Jfet.channel_conductance, for many parts at once
-    whole = channel + shunt_s
+    whole = channel + np.asarray(shunt_s, float)
     return Octaves(
         level=np.log2(whole),
         per_gate_v=twice_beta * (slope**2 + p * curvature) / (whole * LN2),
@@ -163,7 +163,7 @@ class Cloud:
         norm = np.einsum("ij,ij->i", centred, centred)
         square = norm[:, None] + norm[None, :] - 2.0 * (centred @ centred.T)
         whole = np.maximum(square, 0.0) + self.own[:, None] + self.own[None, :]
-        whole = 0.5 * (whole + whole.T)
+        whole = np.asarray(0.5 * (whole + whole.T))
         np.fill_diagonal(whole, 0.0)
         return whole
 

@@ -35,7 +35,7 @@ TRAVEL_SHARE = 0.9
 
 def even_times(period_s: float, points: int) -> Array:
     """Return `points` instants equally spaced over one period, shape (points,) [s]."""
-    return (np.arange(points) + 0.5) * (period_s / points)
+    return np.asarray((np.arange(points) + 0.5) * (period_s / points), float)
 
 
 def notch_targets(stages: int) -> Array:
@@ -45,7 +45,7 @@ def notch_targets(stages: int) -> Array:
     stands where that is an odd multiple of pi.
     """
     first = 0.5 if stages % 2 == 0 else 1.0
-    return (np.arange(stages // 2) + first) * math.pi
+    return np.asarray((np.arange(stages // 2) + first) * math.pi, float)
 
 
 @dataclass(frozen=True)

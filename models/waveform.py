@@ -219,7 +219,7 @@ class Segments:
             if length > 0:
                 t0 = done / rate_hz - start
                 c0, c1, c2, c3 = self.coefficients[index]
-                rows = t0 + np.arange(-(-length // ROW)) * (ROW / rate_hz)
+                rows = np.asarray(t0 + np.arange(-(-length // ROW)) * (ROW / rate_hz), float)
                 products = []
                 if c2 != 0.0:
                     products.append((c2 * np.exp(-a * rows), fine_first))

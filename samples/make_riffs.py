@@ -211,7 +211,7 @@ def make_riff(name: str) -> Array:
     samples = RIFFS[name][0]()
     samples -= samples.mean()
     gain = 10.0 ** (PEAK_DBFS / 20.0) / float(np.max(np.abs(samples)))
-    return samples[:, None] * gain
+    return np.asarray(samples[:, None] * gain)
 
 
 def main(folder: Path) -> None:
