@@ -16,7 +16,6 @@ nothing (nominal temperature = temperature).
 
 from __future__ import annotations
 
-import math
 import re
 import unicodedata
 from collections.abc import Sequence
@@ -133,6 +132,8 @@ def write_netlist(
     if part == "unit":
         lines += _mix(circuit)
     lines += ["", "* Models", *_models(jfets, gate_conduction), *_opamp(circuit)]
+    if bus is not None:
+        lines += _switch(circuit)
     if analysis is None:
         stop_s = 0.1 if bus is None else 2.0 * bus.period_s
         output = "v(out)" if part == "unit" else f"v(y{circuit.stage_count})"
@@ -362,21 +363,23 @@ def _models(jfets: Sequence[Jfet], gate_conduction: bool) -> list[str]:
 
 def _opamp(circuit: Circuit) -> list[str]:
     low, high = circuit.rails_v
-    lines = [
+    return [
         "* Op amp: ideal but for the ends of its output's reach",
         ".subckt opamp plus minus out",
         f"B1 out 0 V={{min(max({OPAMP_GAIN:.0e}*V(plus,minus),{_number(low)}),{_number(high)})}}",
         ".ends",
     ]
+
+
+def _switch(circuit: Circuit) -> list[str]:
     oscillator = circuit.oscillator
     if isinstance(oscillator, SineOscillator | MeasuredOscillator):
-        return lines
+        return []
+    low, high = circuit.rails_v
     name, start_v = (
         ("switchlow", low) if isinstance(oscillator, TriangleOscillator) else ("switchhigh", high)
     )
-    assert math.isfinite(start_v)
     return [
-        *lines,
         "* The oscillator's op amp: from end to end within a fraction of a microsecond",
         f".subckt {name} plus minus out",
         f"B1 fast 0 V={{min(max({SWITCH_GAIN:.0e}*V(plus,minus),{_number(low)}),{_number(high)})}}",
