@@ -15,6 +15,7 @@ import shutil
 import sys
 import tempfile
 from collections.abc import Callable
+from contextlib import suppress
 from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar, cast
@@ -123,8 +124,9 @@ def _forgive_full_disk(dispatcher: Any) -> None:
     def try_save(signature: Any, data: Any) -> None:
         try:
             save(signature, data)
-        except OSError:
-            return
+        except Exception:  # a full disk, or an index cut short: start it anew next time
+            with suppress(OSError, AttributeError):
+                Path(store._cache_file._index_path).unlink()
 
     def try_load(signature: Any, target: Any) -> Any:
         try:
