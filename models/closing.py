@@ -294,7 +294,7 @@ def _seed(grid: SweepGrid, fixed: int, share: float) -> float | None:
     if not seeds:
         return None
     sets = np.array(sorted(seeds), dtype=np.int64)
-    places, travel, _, _ = grid.own_bias(sets)
+    places, travel, _ = grid.own_bias(sets)
     full = travel >= share * grid.uniform_travel[sets].mean(axis=1)
     values = np.full(sets.shape[0], np.inf)
     for q in np.unique(places):

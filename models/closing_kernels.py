@@ -9,8 +9,6 @@ from __future__ import annotations
 import math
 from typing import Any
 
-import numpy as np
-
 from .jit import kernel
 
 
@@ -98,14 +96,15 @@ def own_position(
     targets: Any,
     band_low: float,
     band_high: float,
-    objective: Any,
+    start: int,
+    stop: int,
 ) -> tuple[int, float, float]:
-    """Return place, travel and stall of the best grid position; fill `objective` (positions,)."""
+    """Return place, travel and stall of the best grid position from start to stop (left out)."""
     best = -1.0
-    place = 0
+    place = start
     best_travel = 0.0
     best_stall = 0.0
-    for q in range(level.shape[0]):
+    for q in range(start, stop):
         travel, stall = travel_and_stall(
             level[q],
             slope[q],
@@ -118,9 +117,9 @@ def own_position(
             band_low,
             band_high,
         )
-        objective[q] = travel * (1.0 - stall)
-        if objective[q] > best:
-            best = objective[q]
+        objective = travel * (1.0 - stall)
+        if objective > best:
+            best = objective
             place = q
             best_travel = travel
             best_stall = stall
@@ -138,12 +137,13 @@ def own_positions(
     targets: Any,
     band_low: float,
     band_high: float,
+    starts: Any,
+    stops: Any,
     places: Any,
     travels: Any,
     stalls: Any,
-    objectives: Any,
 ) -> None:
-    """Fill place, travel, stall (sets,) and objectives (sets, positions) of many sets."""
+    """Fill place, travel and stall (sets,) of many sets, each looked for from start to stop."""
     for n in range(sets.shape[0]):
         places[n], travels[n], stalls[n] = own_position(
             level,
@@ -156,7 +156,8 @@ def own_positions(
             targets,
             band_low,
             band_high,
-            objectives[n],
+            starts[n],
+            stops[n],
         )
 
 
@@ -413,7 +414,6 @@ def at_own_bias(
 ) -> None:
     """Fill `yes` (sets,): full travel at this grid position, and it is the set's own bias."""
     count = sets.shape[1]
-    objective = np.empty(level.shape[0], np.float64)
     for s in range(sets.shape[0]):
         members = sets[s]
         yes[s] = False
@@ -463,6 +463,7 @@ def at_own_bias(
             targets,
             band_low,
             band_high,
-            objective,
+            0,
+            level.shape[0],
         )
         yes[s] = own == place

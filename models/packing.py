@@ -1,12 +1,10 @@
 """As many disjoint sets as a tray yields under a stagger limit, and how many there can be at most.
 
-A packing problem: each set of parts within the limit is a column, each part may be
-used once. Its linear relaxation bounds the count from above and says more than parts
-divided by stages, because it knows which parts have too few partners. Columns enter
-by their price against the relaxation's dual values; HiGHS (through scipy.optimize)
-solves the relaxation and then the whole-number problem over the columns that the
-duals leave in the running (a set in a packing of K sets has a reduced cost of at most
-the relaxation's optimum less K).
+A packing problem: each set within the limit may be packed, each part used once. A
+local search finds packings (``packing_kernels``); the relaxed problem bounds their
+count from above (``relaxation``) and says more than parts divided by stages, because
+it knows which parts have too few partners. Where the two differ, HiGHS (through
+scipy.optimize) branches over the sets that a larger packing would have to consist of.
 
 Which sets are within the limit depends on each set's own bias. For the bound a set
 counts as soon as its distances, each at its least over a few grid positions about the
@@ -26,6 +24,7 @@ import numpy.typing as npt
 
 from .closing import Walk
 from .pairwise import Array, Index
+from .relaxation import count_bound
 from .sweepgrid import TRAVEL_SHARE, SweepGrid
 
 # Grid positions to either side of the uniform set's bias in which a set's own bias is
@@ -33,16 +32,31 @@ from .sweepgrid import TRAVEL_SHARE, SweepGrid
 WINDOW = 2
 LISTED_SETS = 400_000
 VISITED_SETS = 40_000_000
-COLUMNS_PER_ROUND = 1500
-ROUNDS = 60
-WHOLE_COLUMNS = 2500
+WHOLE_COLUMNS = 1500
 BRANCH_NODES = 200
-SECONDS = 20.0
-# Repair: so many neighbouring sets are taken apart and packed anew, so many times at most.
-TAKEN_APART = 9
-REPAIRS = 80
-REPAIR_COLUMNS = 1500
+SECONDS = 4.0
+# Local search: sets to exchange among, positions about the uniform set's bias in which their
+# own bias is looked for at first.
+EXCHANGED_SETS = 40_000
+EVERYWHERE_SETS = 10_000
+REACH = 8
 SEED = 20261201
+
+
+@dataclass(frozen=True)
+class _Search:
+    """Effort of one local search: steps, and temperatures in sets."""
+
+    steps: int
+    hot: float
+    cold: float
+
+
+SEARCHES = (
+    _Search(4_000_000, 0.6, 0.12),
+    _Search(20_000_000, 0.25, 0.15),
+    _Search(40_000_000, 0.5, 0.12),
+)
 
 
 @dataclass(frozen=True)
@@ -78,9 +92,7 @@ class Packing:
     lonely: Index
 
 
-def pack_sets(
-    grid: SweepGrid, limit_octaves: float, *, listed: int = LISTED_SETS, rounds: int = ROUNDS
-) -> Packing:
+def pack_sets(grid: SweepGrid, limit_octaves: float, *, listed: int = LISTED_SETS) -> Packing:
     """Return as many disjoint sets as can be found, with an upper bound of their number.
 
     Parameters
@@ -91,8 +103,6 @@ def pack_sets(
         Greatest expected stagger of a set, more than 0 [octaves].
     listed : int
         Sets within the limit to hold in memory; the bound rests on all of them.
-    rounds : int
-        Rounds of pricing.
     """
     parts, count = len(grid.parts), grid.stages
     pool = np.empty((0, count), np.int64)
@@ -120,33 +130,35 @@ def pack_sets(
     simple = int(stands.sum()) // count
     if pool.shape[0] == 0:
         return _packed(grid, pool, 0 if complete else simple, _REASON[0], 0, ~stands)
-    _, dual, optimum = _relax(pool, parts, rounds)
     bound, reason = simple, _REASON[1] if complete else _REASON[3]
-    if all_listed:
-        relaxed = math.floor(optimum + 1e-6)
-        if relaxed < bound:
-            bound, reason = relaxed, _REASON[2]
-    reduced = dual[pool].sum(axis=1) - 1.0
-    fits = _Fits(grid, pool, limit_octaves)
-    chosen = _repair(fits, _greedy(fits, reduced), bound)
-    if chosen.size < bound:
-        # a larger packing consists of these columns alone
-        near = np.flatnonzero(reduced <= optimum - (chosen.size + 1) + 1e-7)
-        if all_listed and near.size <= WHOLE_COLUMNS:
-            found, most = _whole(fits, near)
-            if found.size > chosen.size:
-                chosen = found
-            proven = max(chosen.size, min(bound, math.floor(most + 1e-6)))
-            if proven < bound:
-                bound, reason = proven, _REASON[4]
-    chosen = pool[chosen]
+    fitting = pool[_fitting(grid, pool, limit_octaves)]
+    if all_listed and pool.shape[0] <= EXCHANGED_SETS:
+        pool = fitting  # all were looked at: the bound need not count the others
+    chosen = _exchange(fitting, parts, bound, SEARCHES[0], pool[:0])
+    if all_listed and pool.shape[0] and chosen.shape[0] < bound:
+        relaxed = count_bound(pool, parts, chosen.shape[0])
+        if relaxed.count < bound:
+            bound, reason = relaxed.count, _REASON[2]
+        # a larger packing consists of these sets alone
+        near = relaxed.price <= 1.0 + relaxed.relaxed - (chosen.shape[0] + 1) + 1e-6
+        if chosen.shape[0] < bound and near.sum() <= WHOLE_COLUMNS:
+            larger, most = _branch(pool[near], parts)
+            if pool is fitting and larger.shape[0] > chosen.shape[0]:
+                chosen = larger
+            most = max(chosen.shape[0], most)
+            if most < bound:
+                bound, reason = most, _REASON[4]
+    for search in SEARCHES[1:]:
+        if chosen.shape[0] < bound - 1:
+            chosen = _exchange(fitting, parts, bound, search, chosen)
+    chosen = chosen[_figures(grid, chosen)[0] <= limit_octaves]
     return _packed(grid, chosen, bound, reason, total if complete else None, ~stands)
 
 
 _REASON = (
     "no set at all is within the limit",
     "parts that stand in some set within the limit, divided by stages",
-    "linear relaxation over all sets within the limit",
+    "relaxed packing problem over all sets within the limit",
     "parts divided by stages: too many sets are within the limit to visit them all",
     "branch and bound over the sets the relaxation leaves in the running",
 )
@@ -204,39 +216,6 @@ def _about(place: Index, q: int, distance: Array, reach: float) -> Index:
     return np.flatnonzero(beside)
 
 
-def _relax(pool: Index, parts: int, rounds: int) -> tuple[Index, Array, float]:
-    """Return used columns, dual values (P,) and a bound from the linear relaxation of the pool.
-
-    If the rounds run out before no column improves, the dual values are scaled up
-    until none does (Farley's bound), which keeps the bound valid.
-    """
-    from scipy.optimize import linprog
-
-    chosen = np.unique(np.linspace(0, pool.shape[0] - 1, COLUMNS_PER_ROUND).astype(np.int64))
-    dual = np.full(parts, 1.0 / pool.shape[1])
-    for _ in range(rounds):
-        result = linprog(
-            -np.ones(chosen.size),
-            A_ub=_incidence(pool[chosen], parts),
-            b_ub=np.ones(parts),
-            bounds=(0.0, None),
-            method="highs",
-        )
-        dual = np.maximum(-np.asarray(result.ineqlin.marginals), 0.0)
-        price = dual[pool].sum(axis=1)
-        worst = np.argsort(price, kind="stable")[:COLUMNS_PER_ROUND]
-        worst = worst[price[worst] < 1.0 - 1e-9]
-        if worst.size == 0:
-            break
-        chosen = np.union1d(chosen, worst)
-    least = float(dual[pool].sum(axis=1).min())
-    if 0.0 < least < 1.0:
-        dual = dual / least
-    elif least <= 0.0:
-        dual = np.full(parts, 1.0 / pool.shape[1])
-    return chosen, dual, float(dual.sum())
-
-
 def _incidence(sets: Index, parts: int):  # type: ignore[no-untyped-def]
     from scipy.sparse import csc_matrix
 
@@ -247,9 +226,11 @@ def _incidence(sets: Index, parts: int):  # type: ignore[no-untyped-def]
     )
 
 
-def _figures(grid: SweepGrid, sets: Index) -> tuple[Array, Array, Array, Index]:
-    """Return stagger, travel, stall and place of sets at own bias; stagger inf if short."""
-    places, travel, stall, _ = grid.own_bias(sets)
+def _figures(
+    grid: SweepGrid, sets: Index, reach: int | None = None
+) -> tuple[Array, Array, Array, Index]:
+    """Return expected stagger, travel, stall, place of sets at own bias; short ones inf stagger."""
+    places, travel, stall = grid.own_bias(sets, reach)
     stagger = np.zeros(sets.shape[0])
     for q in np.unique(places):
         at = places == q
@@ -258,104 +239,58 @@ def _figures(grid: SweepGrid, sets: Index) -> tuple[Array, Array, Array, Index]:
     return np.where(short, np.inf, stagger), travel, stall, places
 
 
-class _Fits:
-    """Which of the pool's sets are within the limit at their own bias, found out as needed."""
-
-    def __init__(self, grid: SweepGrid, pool: Index, limit_octaves: float) -> None:
-        self.grid = grid
-        self.pool = pool
-        self.limit_octaves = limit_octaves
-        self._stagger = np.full(pool.shape[0], np.nan)
-
-    def stagger(self, columns: Index) -> Array:
-        """Return the expected stagger of these columns, inf for short travel [octaves]."""
-        unknown = columns[np.isnan(self._stagger[columns])]
-        if unknown.size:
-            self._stagger[unknown] = _figures(self.grid, self.pool[unknown])[0]
-        return self._stagger[columns]
-
-    def those(self, columns: Index) -> Index:
-        """Return the columns that are within the limit."""
-        return columns[self.stagger(columns) <= self.limit_octaves]
+def _fitting(grid: SweepGrid, pool: Index, limit_octaves: float) -> Index:
+    """Return columns within the limit at own bias, of a large pool an even choice by part."""
+    some = np.arange(pool.shape[0])
+    if some.size > EXCHANGED_SETS:
+        share = max(EXCHANGED_SETS // len(grid.parts), 1)
+        generator = np.random.default_rng(SEED)
+        mixed = generator.permutation(some)
+        kept = np.zeros(some.size, np.bool_)
+        for stage in range(pool.shape[1]):
+            # the first few of each part's columns, part by part
+            part = pool[mixed, stage]
+            order = np.argsort(part, kind="stable")
+            first = np.searchsorted(part[order], part[order], side="left")
+            kept[mixed[order[np.arange(some.size) - first < share]]] = True
+        some = np.flatnonzero(kept)
+    reach = None if some.size <= EVERYWHERE_SETS else REACH
+    return some[_figures(grid, pool[some], reach)[0] <= limit_octaves]
 
 
-def _greedy(fits: _Fits, reduced: Array) -> Index:
-    """Return disjoint columns, taken by reduced cost: scarce parts first, none wasted."""
-    used = np.zeros(len(fits.grid.parts), np.bool_)
-    chosen: list[int] = []
-    for n in np.argsort(reduced, kind="stable"):
-        members = fits.pool[n]
-        if not used[members].any() and fits.those(np.array([n])).size:
-            chosen.append(int(n))
-            used[members] = True
-    return np.array(chosen, dtype=np.int64)
+def _exchange(sets: Index, parts: int, wanted: int, search: _Search, so_far: Index) -> Index:
+    """Return the larger of the packing so far and one that a local search finds."""
+    from .packing_kernels import anneal
+
+    if sets.shape[0] == 0 or so_far.shape[0] >= wanted:
+        return so_far
+    flat = sets.ravel()
+    order = np.argsort(flat, kind="stable")
+    start = np.searchsorted(flat[order], np.arange(parts + 1)).astype(np.int64)
+    owner, best = np.full(parts, -1, np.int64), np.full(parts, -1, np.int64)
+    size = anneal(
+        np.ascontiguousarray(sets), start, order // sets.shape[1], np.zeros(parts, np.int64),
+        owner, search.steps, search.hot, search.cold, np.array([SEED]), best, wanted,
+    )  # fmt: skip
+    return sets[np.unique(best[best >= 0])] if size > so_far.shape[0] else so_far
 
 
-def _repair(fits: _Fits, chosen: Index, bound: int) -> Index:
-    """Return a packing at least as large: neighbouring sets are taken apart and packed anew.
-
-    Each time about a part left over. Packings of the same size are accepted too,
-    so that the parts left over wander until enough of them meet.
-    """
-    pool, grid = fits.pool, fits.grid
-    count = pool.shape[1]
-    generator = np.random.default_rng(SEED)
-    middle = int(np.median(grid.uniform_place))
-    points = grid.cloud(middle).points
-    stands = np.zeros(len(grid.parts), np.bool_)
-    stands[pool] = True
-    for _ in range(REPAIRS):
-        if chosen.size >= bound:
-            break
-        used = np.zeros(len(grid.parts), np.bool_)
-        used[pool[chosen]] = True
-        spare = np.flatnonzero(stands & ~used)
-        if spare.size < count:
-            break
-        about = points[generator.choice(spare)]
-        centres = points[pool[chosen]].mean(axis=1)
-        apart = np.argsort(((centres - about) ** 2).sum(axis=1), kind="stable")[:TAKEN_APART]
-        nearest = spare[np.argsort(((points[spare] - about) ** 2).sum(axis=1), kind="stable")]
-        free = np.zeros(len(grid.parts), np.bool_)
-        free[pool[chosen[apart]]] = True
-        free[nearest[: 2 * count + 2]] = True
-        columns = np.flatnonzero(free[pool].all(axis=1))
-        if columns.size > REPAIR_COLUMNS:
-            old = chosen[apart]
-            columns = np.union1d(generator.choice(columns, REPAIR_COLUMNS, replace=False), old)
-        columns = fits.those(columns)
-        found, _ = _solve(pool[columns], 1.0 + 1e-3 * generator.random(columns.size))
-        if found.size >= apart.size:
-            chosen = np.concatenate([np.delete(chosen, apart), columns[found]])
-    return chosen
-
-
-def _solve(sets: Index, gain: Array) -> tuple[Index, float]:
-    """Return disjoint sets of the greatest total gain, as places, and a bound of the total."""
+def _branch(sets: Index, parts: int) -> tuple[Index, int]:
+    """Return a large packing of these sets and an upper bound of the number of disjoint ones."""
     from scipy.optimize import Bounds, LinearConstraint, milp
 
+    if sets.shape[0] == 0:
+        return sets, 0
     result = milp(
-        -gain,
-        constraints=LinearConstraint(_incidence(sets, int(sets.max()) + 1), -np.inf, 1.0),
-        integrality=np.ones(gain.size, dtype=np.int64),
+        -np.ones(sets.shape[0]),
+        constraints=LinearConstraint(_incidence(sets, parts), -np.inf, 1.0),
+        integrality=np.ones(sets.shape[0]),
         bounds=Bounds(0.0, 1.0),
         options={"node_limit": BRANCH_NODES, "time_limit": SECONDS},
     )
+    found = sets[:0] if result.x is None else sets[result.x > 0.5]
     bound = getattr(result, "mip_dual_bound", None)
-    most = math.inf if bound is None else -float(bound)
-    return np.flatnonzero(result.x > 0.5) if result.x is not None else np.arange(0), most
-
-
-def _whole(fits: _Fits, near: Index) -> tuple[Index, float]:
-    """Return a packing by columns within the limit among these, and a bound for all of these."""
-    if near.size == 0:
-        return near, 0.0
-    _, most = _solve(fits.pool[near], np.ones(near.size))
-    fit = fits.those(near)
-    if fit.size == 0:
-        return fit, most
-    found, _ = _solve(fits.pool[fit], np.ones(fit.size))
-    return fit[found], most
+    return found, sets.shape[0] if bound is None else math.floor(1e-6 - float(bound))
 
 
 def _packed(

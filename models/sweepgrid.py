@@ -92,20 +92,32 @@ class SweepGrid:
         swept = Octaves(self.level[place], self.slope[place], self.per_ln_beta[place])
         return cloud(self.parts, swept)
 
-    def own_bias(self, sets: npt.ArrayLike) -> tuple[Index, Array, Array, Array]:
-        """Return place, travel and stall (S,) and objective (S, Q) of sets (S, N) at own bias."""
+    def own_bias(self, sets: npt.ArrayLike, reach: int | None = None) -> tuple[Index, Array, Array]:
+        """Return place, travel [octaves] and stall of sets at own bias, each of shape (S,).
+
+        Parameters
+        ----------
+        sets : array_like of int, shape (S, N)
+            Indices of the parts.
+        reach : int, optional
+            Look only so many grid positions about the uniform set's bias; everywhere
+            when left out.
+        """
         from . import closing_kernels
 
         members = np.ascontiguousarray(sets, dtype=np.int64)
-        count = members.shape[0]
-        places = np.zeros(count, np.int64)
+        count, last = members.shape[0], self.position.size
+        start, stop = np.zeros(count, np.int64), np.full(count, last)
+        if reach is not None:
+            middle = np.rint(self.uniform_place[members].mean(axis=1)).astype(np.int64)
+            start, stop = np.maximum(middle - reach, 0), np.minimum(middle + reach + 1, last)
+        place = np.zeros(count, np.int64)
         travel, stall = np.zeros(count), np.zeros(count)
-        objective = np.zeros((count, self.position.size))
         closing_kernels.own_positions(
             *self.tables(), members, notch_targets(self.stages), *self.band,
-            places, travel, stall, objective,
+            start, stop, place, travel, stall,
         )  # fmt: skip
-        return places, travel, stall, objective
+        return place, travel, stall
 
     def tables(self) -> tuple[Array, Array, Array, Array, Array]:
         """Return the arrays the kernels read."""
