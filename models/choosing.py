@@ -18,6 +18,9 @@ import numpy as np
 from .closing import Search, search_sets
 from .errors import InputError, near_names
 from .expected import expected_stagger
+from .leftover import Leftover, leftovers
+from .ordering import best_order
+from .packing import pack_sets
 from .pairwise import parts_of
 from .sweepgrid import TRAVEL_SHARE, SweepGrid, build_grid
 
@@ -151,7 +154,6 @@ def set_figures(
         Stages (from 0) whose part must stay.
     """
     from .bias import solve_bias
-    from .ordering import best_order
 
     matters = order_matters(circuit)
     names = list(labels)
@@ -266,6 +268,131 @@ def complete_set(
     _enough((*held, *free), circuit)
     grid = build_grid(parts_of(estimate, (*held, *free)), circuit, rate)
     return _judge(estimate, circuit, rate, grid, dict(fixed_stages), finalists)
+
+
+@dataclass(frozen=True)
+class PackedSet:
+    """One of several disjoint sets, as the search's grid sees it.
+
+    Parameters
+    ----------
+    labels : tuple of str
+        Parts in stage order.
+    position : float
+        Trimmer position, to the grid's step.
+    expected_stagger_octaves, travel_octaves, stall : float
+        At that position; travel by the notch condition without feedback.
+    """
+
+    labels: tuple[str, ...]
+    position: float
+    expected_stagger_octaves: float
+    travel_octaves: float
+    stall: float
+
+
+@dataclass(frozen=True)
+class DisjointSets:
+    """As many disjoint sets as were found under a limit.
+
+    Parameters
+    ----------
+    sets : tuple of PackedSet
+        The set of least expected stagger first.
+    bound : int
+        No choice has more sets under the limit.
+    reason : str
+        What the bound rests on.
+    by_count : int
+        Parts divided by stages, the bound that says nothing about the parts.
+    within_limit : int or None
+        Sets within the limit, overlapping ones counted; None if not all were visited.
+    leftovers : tuple of Leftover
+        Parts in no set, each with the reason.
+    position_step : float
+        Step of the grid of trimmer positions.
+    order_matters : bool
+        Another order of the same parts would behave differently.
+    """
+
+    sets: tuple[PackedSet, ...]
+    bound: int
+    reason: str
+    by_count: int
+    within_limit: int | None
+    leftovers: tuple[Leftover, ...]
+    position_step: float
+    order_matters: bool
+
+
+def disjoint_sets(
+    estimate: TrayEstimate,
+    circuit: Circuit,
+    rate: Setting,
+    limit_octaves: float,
+    *,
+    labels: Sequence[str] | None = None,
+) -> DisjointSets:
+    """Return as many disjoint sets within a stagger limit as can be found, and their bound.
+
+    Parameters
+    ----------
+    estimate, circuit, rate, labels
+        As for :func:`best_set`.
+    limit_octaves : float
+        Greatest expected stagger of a set, more than 0 [octaves].
+
+    Raises
+    ------
+    InputError
+        If the limit is not positive, there are fewer parts than stages, or the
+        circuit's shunts differ, for which the search's distances are not exact.
+    """
+    from .gatebus import solve_bus
+
+    if not 0.0 < limit_octaves < math.inf:
+        raise InputError(
+            f"a stagger limit of {limit_octaves:g} octaves cannot be met: give one above 0, "
+            "such as 0.05 (and see the best set's stagger first)"
+        )
+    if not equal_shunts(circuit):
+        raise InputError(
+            f"{circuit.name} has stages with different shunts; disjoint sets are chosen for equal "
+            "shunts only. Choose sets one at a time, leaving out the parts already taken"
+        )
+    wanted = tuple(estimate.labels if labels is None else labels)
+    _enough(wanted, circuit)
+    grid = build_grid(parts_of(estimate, wanted), circuit, rate)
+    packing = pack_sets(grid, limit_octaves)
+    matters = order_matters(circuit)
+    sets = []
+    for n, members in enumerate(packing.sets):
+        position = float(grid.position[packing.place[n]])
+        names = [wanted[i] for i in members]
+        if matters:
+            jfets = [estimate.jfet(name) for name in names]
+            names = [
+                names[i] for i in best_order(circuit, jfets, solve_bus(circuit, position, rate))
+            ]
+        sets.append(
+            PackedSet(
+                labels=tuple(names),
+                position=position,
+                expected_stagger_octaves=float(packing.stagger_octaves[n]),
+                travel_octaves=float(packing.travel_octaves[n]),
+                stall=float(packing.stall[n]),
+            )
+        )
+    return DisjointSets(
+        sets=tuple(sets),
+        bound=packing.bound,
+        reason=packing.reason,
+        by_count=len(wanted) // circuit.stage_count,
+        within_limit=packing.within_limit,
+        leftovers=leftovers(grid, packing, limit_octaves),
+        position_step=float(grid.position[1] - grid.position[0]),
+        order_matters=matters,
+    )
 
 
 def poor_set(

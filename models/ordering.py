@@ -19,21 +19,23 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .chain import break_hz
+from .cycle import Bus, mean_part
+from .notches import find_notches, set_conductance_s
 from .pairwise import Array
+from .sweepgrid import even_times
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from .circuit import Circuit
-    from .cycle import Cycle
-    from .gatebus import BusWave
     from .jfet import Jfet
 
 DEPTH_DB_PER_OCTAVE = 24.0
 LOST_NOTCH_OCTAVES = 1.0
 # 5! = 120 permutations are all tried; beyond, exchanges of two.
 EXHAUSTIVE_STAGES = 5
-CYCLE_POINTS = 48
+CYCLE_POINTS = 16
 
 
 def straying(tracks_hz: Array, depth_db: Array, uniform_hz: Array, uniform_db: Array) -> float:
@@ -62,7 +64,7 @@ def straying(tracks_hz: Array, depth_db: Array, uniform_hz: Array, uniform_db: A
 def best_order(
     circuit: Circuit,
     jfets: Sequence[Jfet],
-    bus: BusWave,
+    bus: Bus,
     held: frozenset[int] = frozenset(),
 ) -> tuple[int, ...]:
     """Return which part stands in each stage in the best order.
@@ -73,49 +75,51 @@ def best_order(
         The circuit.
     jfets : sequence of Jfet
         One a stage, in a first order.
-    bus : BusWave
+    bus : Bus
         The gate bus at the set's bias, which hardly depends on the order.
     held : frozenset of int
         Stages (from 0) whose part must stay.
 
     Notes
     -----
-    With up to five free stages every permutation is tried. With more, each pair of
-    free stages is exchanged as long as that helps, which finds a good order, not
-    provably the best.
+    With up to five free stages every permutation is tried. With more, the best
+    exchange of two free stages is made as long as one helps, which finds a good order,
+    not provably the best.
     """
-    from .cycle import analyse_cycle, mean_part
+    stages = len(jfets)
+    gate_v = bus.gate_v(even_times(bus.period_s, CYCLE_POINTS))
+    conductance_s = set_conductance_s(circuit, jfets, gate_v)
+    mean = set_conductance_s(circuit, [mean_part(jfets)] * stages, gate_v)
+    uniform_hz, uniform_db = find_notches(circuit, break_hz(circuit, mean))
 
-    def cycle_of(order: Sequence[int]) -> Cycle:
-        return analyse_cycle(circuit, [jfets[n] for n in order], bus, points=CYCLE_POINTS)
+    def costs(orders: list[tuple[int, ...]]) -> list[float]:
+        breaks = np.concatenate([break_hz(circuit, conductance_s[:, list(o)]) for o in orders])
+        shape = (len(orders), CYCLE_POINTS, -1)
+        tracks, depths = (part.reshape(shape) for part in find_notches(circuit, breaks))
+        return [
+            straying(*both, uniform_hz, uniform_db) for both in zip(tracks, depths, strict=True)
+        ]
 
-    uniform = analyse_cycle(circuit, [mean_part(jfets)] * len(jfets), bus, points=CYCLE_POINTS)
-
-    def cost(order: Sequence[int]) -> float:
-        cycle = cycle_of(order)
-        return straying(cycle.notch_hz, cycle.notch_db, uniform.notch_hz, uniform.notch_db)
-
-    start = list(range(len(jfets)))
+    start = tuple(range(stages))
     free = [n for n in start if n not in held]
     if len(free) <= EXHAUSTIVE_STAGES:
-        best = (cost(start), tuple(start))
+        orders = []
         for arrangement in permutations(free):
-            if list(arrangement) == free:
-                continue
             order = list(start)
             for stage, part in zip(free, arrangement, strict=True):
                 order[stage] = part
-            best = min(best, (cost(order), tuple(order)))
-        return best[1]
-    value, order = cost(start), start
-    improved = True
-    while improved:
-        improved = False
-        for n, first in enumerate(free):
-            for second in free[n + 1 :]:
-                trial = list(order)
-                trial[first], trial[second] = trial[second], trial[first]
-                there = cost(trial)
-                if there < value - 1e-9:
-                    value, order, improved = there, trial, True
-    return tuple(order)
+            orders.append(tuple(order))
+        return min(zip(costs(orders), orders, strict=True))[1]
+    order, value = start, costs([start])[0]
+    while True:
+        trials = [_exchanged(order, a, b) for n, a in enumerate(free) for b in free[n + 1 :]]
+        there, trial = min(zip(costs(trials), trials, strict=True))
+        if there > value - 1e-9:
+            return order
+        value, order = there, trial
+
+
+def _exchanged(order: tuple[int, ...], first: int, second: int) -> tuple[int, ...]:
+    parts = list(order)
+    parts[first], parts[second] = parts[second], parts[first]
+    return tuple(parts)
