@@ -146,7 +146,7 @@ class Search:
     bound_octaves : float
         No set outside `sets` has a smaller expected stagger on the grid.
     full_travel : bool
-        The sets' travel is 90 % of a uniform set's or more; if not, no set reaches that.
+        The sets' travel is the share asked for or more; if not, no set reaches that.
     """
 
     sets: Index
@@ -167,6 +167,7 @@ def search_sets(
     keep: int = KEPT_SETS,
     margin: float = KEPT_MARGIN,
     node_limit: int = NODE_LIMIT,
+    travel_share: float = TRAVEL_SHARE,
 ) -> Search:
     """Return the sets of least expected stagger at their own bias.
 
@@ -182,8 +183,11 @@ def search_sets(
         Sets within this factor of the best stagger are returned too, 1 or more.
     node_limit : int
         Partial sets to look at before giving up the proof.
+    travel_share : float
+        Sets whose travel is a smaller share of a uniform set's are left out, unless there
+        are no others.
     """
-    for share in (TRAVEL_SHARE, 0.0):
+    for share in (travel_share, 0.0):
         found = _search(grid, fixed, keep, margin, node_limit, share)
         if found.sets.shape[0]:
             return found
