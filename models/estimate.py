@@ -22,7 +22,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -51,9 +51,11 @@ _MAD_TO_SPREAD = 1.4826
 _MEDIAN_LOSS = 1.2533
 # Below this spread of ln |VC| a tray cannot teach the slope.
 _LEAST_LEVER = 0.04
+# Steps of differences: of the parameters, and the share of a common error.
 _STEP = 1e-4
-# Where the gauss-newton iteration counts as settled, in standard deviations of the assumption.
-_SETTLED = 1e-9
+_SMALL = 1e-2
+# Where the Gauss-Newton iteration counts as settled, in standard errors of the result.
+_SETTLED = 1e-5
 
 
 @dataclass(frozen=True)
@@ -356,7 +358,9 @@ class _Prior:
                 math.hypot(told.lambda_ln_spread, told.lambda_ln_batch),
             )
             common[at, 1, 2 * place] = told.beta_ln_batch
-            common[at, 2, 2 * place + 1] = told.lambda_ln_batch
+            # Readings go with lambda itself, which spreads more than its logarithm says.
+            square = told.lambda_ln_batch**2
+            common[at, 2, 2 * place + 1] = math.sqrt(math.expm1(square) * math.exp(square))
             shown = told.name if name == "" else name
             names += [f"current factor of the batch ({shown})", f"lambda of the batch ({shown})"]
         return cls(mean, own, whole, common, tuple(names))
@@ -463,8 +467,10 @@ class _Problem:
                 (kind.predict(channels, warmer) - kind.predict(channels, cooler)) * celsius_u / 2.0
             )
             for source in kind.error_sources(self.shown[:, column], at):
-                moved = np.asarray(source.shown, float) - usual
-                moved = moved + kind.predict(channels, source.conditions)
+                # A small part of the error, so that the law's curve does not count.
+                slightly = _toward(at, source.conditions, _SMALL)
+                moved = np.asarray(source.shown, float)
+                moved = moved + (kind.predict(channels, slightly) - usual) / _SMALL
                 for name, shares in _groups(source.name, source.group, self.present[:, column]):
                     table = by_factor.setdefault(name, np.zeros((count, width)))
                     table[:, column] += np.where(shares, moved, 0.0)
@@ -489,6 +495,16 @@ def _stacked(sittings: Sequence[Conditions]) -> Conditions:
         column("resistor_ohm"),
         column("current_a"),
     )
+
+
+def _toward(start: Conditions, end: Conditions, share: float) -> Conditions:
+    """Return conditions a share of the way from one to another."""
+
+    def part(name: str) -> Array:
+        low, high = np.asarray(getattr(start, name)), np.asarray(getattr(end, name))
+        return np.asarray(low + share * (high - low))
+
+    return Conditions(*(part(name.name) for name in fields(Conditions)))
 
 
 def _groups(
@@ -600,7 +616,8 @@ def _descend(problem: _Problem, prior: _Prior, z: Array, shown: Array, weight: A
         # A far start must not throw the logarithms out of all reason.
         reach = np.max(np.abs(np.einsum("pij,pj->pi", prior.whole, step)), axis=1)
         step = step * np.minimum(1.0, 1.0 / np.maximum(reach, 1e-300))[:, None]
-        if np.max(np.abs(step), initial=0.0) < _SETTLED:
+        left = np.sqrt(np.einsum("pi,pij,pj->p", step, curvature, step))
+        if np.max(left, initial=0.0) < _SETTLED:
             return z
         share = np.ones(len(z))
         for _ in range(12):
@@ -613,7 +630,7 @@ def _descend(problem: _Problem, prior: _Prior, z: Array, shown: Array, weight: A
         better = new <= value * (1.0 + 1e-9) + 1e-9
         z = np.where(better[:, None], tried, z)
         value = np.where(better, new, value)
-        if not np.any(better & (np.max(np.abs(step), axis=1) * share >= _SETTLED)):
+        if not np.any(better & (left * share >= _SETTLED)):
             return z
     return z
 

@@ -333,10 +333,10 @@ class _Reading(Part):
         return parse_quantity(text, self.quantity)
 
     def _meter_source(self, reading: ArrayLike, conditions: Conditions) -> ErrorSource:
-        """Return the meter's error of scale; override where it also measured a condition."""
+        """Return the meter's error of scale: it shows too much, whatever the sign."""
         return ErrorSource(
             f"scale of {self.meter_name} ({self.quantity})",
-            self.meter.scale_u(reading),
+            np.copysign(self.meter.scale_u(reading), reading),
             conditions,
         )
 
@@ -745,11 +745,9 @@ class CutoffReading(_Reading):
 
     def error_sources(self, reading: ArrayLike, conditions: Conditions) -> list[ErrorSource]:
         """Return the errors these readings share with others."""
-        # A meter that shows too much shows a gate voltage too far below 0.
-        scale = self._meter_source(reading, conditions)
         current = np.asarray(conditions.current_a, float) * (1.0 + self.current_accuracy / _SQRT3)
         return [
-            replace(scale, shown=-np.asarray(scale.shown)),
+            self._meter_source(reading, conditions),
             ErrorSource(
                 f"test current {format_quantity(self.current_a, 'A', 6)}",
                 0.0,
