@@ -128,16 +128,18 @@ class _Text:
 
     def written(self) -> str:
         """Return the file's content."""
-        stream = io.StringIO()
-        writer = csv.writer(stream, delimiter=self.delimiter, lineterminator=self.line_end)
-        for row in self.rows:
-            # A row of one empty cell would be written as "" and no longer be blank.
-            if len(row) == 1 and not row[0]:
-                stream.write(self.line_end)
-            else:
-                writer.writerow(row)
-        head = self.separator_line + self.line_end if self.separator_line else ""
-        return (_BOM if self.bom else "") + head + stream.getvalue()
+        lines = [self.delimiter.join(self._quoted(cell) for cell in row) for row in self.rows]
+        head = [self.separator_line] if self.separator_line else []
+        return (_BOM if self.bom else "") + "".join(
+            line + self.line_end for line in (*head, *lines)
+        )
+
+    def _quoted(self, cell: str) -> str:
+        # The csv module leaves a lone carriage return unquoted in some versions, and
+        # then reads it back as the end of the row.
+        if any(mark in cell for mark in (self.delimiter, '"', "\r", "\n")):
+            return '"' + cell.replace('"', '""') + '"'
+        return cell
 
 
 @dataclass(frozen=True)
