@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -30,6 +30,7 @@ if TYPE_CHECKING:
     from .estimate import TrayEstimate
     from .jfet import Jfet
     from .quantity import Setting
+    from .tray import Tray
 
 FINALISTS = 4
 MOST_FINALISTS = 12
@@ -444,6 +445,27 @@ def poor_set(
     if np.unique(ranks).size < ranks.size:  # hardly more parts than stages
         ranks = np.rint(np.linspace(0, len(wanted) - 1, circuit.stage_count)).astype(int)
     return set_figures(estimate, circuit, rate, [wanted[order[rank]] for rank in ranks])
+
+
+def with_unknowns(tray: Tray, stages: Sequence[int], type_name: str = "") -> Tray:
+    """Return the tray with unknown soldered parts added, named ``?1`` for stage 1 and so on.
+
+    Parameters
+    ----------
+    tray : Tray
+        The measured parts.
+    stages : sequence of int
+        Stages (from 0) that hold an unknown part.
+    type_name : str
+        What they are said to be; the type assumption gives their mean and spread.
+    """
+    from .tray import TrayPart
+
+    added = tuple(
+        TrayPart(label=f"?{stage + 1}", row=0, readings={}, type_name=type_name, used="soldered")
+        for stage in stages
+    )
+    return replace(tray, parts=tray.parts + added)
 
 
 def _judge(

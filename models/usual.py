@@ -7,7 +7,7 @@ can see where the two disagree.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 
 USUAL_LIMIT = 0.05
 
@@ -36,27 +36,51 @@ def usual_fraction(readings_v: Sequence[float]) -> float:
 
 
 def why_they_disagree(
-    percent: float, stagger_octaves: float, other_percent: float, other_stagger_octaves: float
+    fraction: float, stagger_octaves: float, other_fraction: float, other_stagger_octaves: float
 ) -> str | None:
     """Return a sentence if percentage and stagger rank two sets differently, else None.
 
     Parameters
     ----------
-    percent, other_percent : float
-        Usual percentages as fractions.
+    fraction, other_fraction : float
+        Usual percentages of this and the other set, as fractions.
     stagger_octaves, other_stagger_octaves : float
         Expected staggers [octaves].
     """
-    if (percent - other_percent) * (stagger_octaves - other_stagger_octaves) >= 0.0:
+    if (fraction - other_fraction) * (stagger_octaves - other_stagger_octaves) >= 0.0:
         return None
-    tighter, looser = "the other set", "this set"
-    if percent < other_percent:
-        tighter, looser = looser, tighter
+    closer, better = "the other set", "this set"
+    if fraction < other_fraction:
+        closer, better = better, closer
+    near, far = sorted((fraction, other_fraction))
+    low, high = sorted((stagger_octaves, other_stagger_octaves))
     return (
-        f"{tighter} has the closer readings ({100 * min(percent, other_percent):.1f} % against "
-        f"{100 * max(percent, other_percent):.1f} %) but {looser} keeps together over the sweep "
-        f"({min(stagger_octaves, other_stagger_octaves):.3f} against "
-        f"{max(stagger_octaves, other_stagger_octaves):.3f} octave): a reading is one point of the "
-        "curve, and parts with the same reading and different current factors part company "
-        "elsewhere on it"
+        f"{closer} has the closer readings ({100 * near:.1f} % against {100 * far:.1f} %) but "
+        f"{better} keeps together over the sweep ({low:.3f} against {high:.3f} octave): a reading "
+        "is one point of the curve, and parts with the same reading and different current factors "
+        "part company elsewhere on it"
     )
+
+
+def usual_choice(readings_v: Mapping[str, float], stages: int) -> tuple[str, ...] | None:
+    """Return the set that the usual rule alone would take: the least range over mean.
+
+    Parameters
+    ----------
+    readings_v : mapping of str to float
+        Part to reading, all of one kind [V].
+    stages : int
+        Parts in a set.
+
+    Returns
+    -------
+    tuple of str or None
+        None if there are too few positive readings. Such a set is always a run of the
+        sorted readings: at a given least reading, the next ones have the least range.
+    """
+    ranked = sorted((value, label) for label, value in readings_v.items() if value > 0.0)
+    runs = [ranked[n : n + stages] for n in range(len(ranked) - stages + 1)]
+    if not runs:
+        return None
+    best = min(runs, key=lambda run: usual_fraction([value for value, _ in run]))
+    return tuple(label for _, label in best)
