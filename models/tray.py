@@ -593,8 +593,8 @@ def _question_column(
             row,
             name,
             None,
-            f"the fixture does not describe it{near_names(name, known)} Rename the column, or "
-            "describe it in the fixture file",
+            f"the fixture does not describe it{near_names(name, known) or ';'} rename the column, "
+            "or describe it in the fixture file",
         )
     else:
         cautions.append(
