@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .packing import Packing
+from .pairwise import Array
 from .sweepgrid import SweepGrid
 
 
@@ -50,11 +51,14 @@ def leftovers(grid: SweepGrid, packing: Packing, limit_octaves: float) -> tuple[
     labels = grid.parts.labels
     chosen = {int(i): n + 1 for n, members in enumerate(packing.sets) for i in members}
     lonely = {int(i) for i in packing.lonely}
+    nearest: dict[int, Array] = {}
+    spare = np.array([i for i in range(len(labels)) if i not in chosen], dtype=np.int64)
+    for q in np.unique(grid.uniform_place[spare]):
+        between = grid.cloud(int(q)).distances()
+        nearest |= {int(i): between[i] for i in spare[grid.uniform_place[spare] == q]}
     found = []
-    for i in range(len(labels)):
-        if i in chosen:
-            continue
-        distance = grid.cloud(int(grid.uniform_place[i])).distances()[i]
+    for i in (int(one) for one in spare):
+        distance = nearest[i]
         distance[i] = -1.0
         members = np.argsort(distance, kind="stable")[: grid.stages]
         place, _, _ = grid.own_bias(members[None, :])

@@ -8,6 +8,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 from sweepset.models.bias import solve_bias
 from sweepset.models.choosing import (
     best_set,
@@ -28,7 +30,7 @@ from sweepset.models.ordering import best_order, straying
 from sweepset.models.pairwise import Parts, parts_of
 from sweepset.models.quantity import parse_rate
 from sweepset.models.tray import load_tray
-from sweepset.models.usual import usual_fraction, why_they_disagree
+from sweepset.models.usual import usual_choice, usual_fraction, why_they_disagree
 
 SAMPLES = Path(__file__).resolve().parents[2] / "samples"
 NOON = parse_rate("noon")
@@ -256,3 +258,19 @@ def test_disagreement_is_explained_only_where_there_is_one() -> None:
     assert text is not None
     assert "the other set has the closer readings (2.0 % against 5.0 %)" in text
     assert "this set keeps together over the sweep (0.030 against 0.080 octave)" in text
+
+
+@given(st.lists(st.floats(0.1, 5.0), min_size=2, max_size=9), st.integers(2, 4))
+def test_the_usual_rules_choice_is_the_best_of_all_combinations(
+    values: list[float], stages: int
+) -> None:
+    readings = {f"J{n}": value for n, value in enumerate(values)}
+    chosen = usual_choice(readings, stages)
+    every = list(combinations(readings, stages))
+    if not every:
+        assert chosen is None
+        return
+    assert chosen is not None
+    assert usual_fraction([readings[one] for one in chosen]) == pytest.approx(
+        min(usual_fraction([readings[one] for one in names]) for names in every)
+    )
