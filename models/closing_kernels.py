@@ -167,7 +167,7 @@ def after(distance: Any, i: int, j: int, pair_distance: float, pair_key: int) ->
     value = distance[i, j]
     if value != pair_distance:
         return bool(value > pair_distance)
-    return min(i, j) * distance.shape[0] + max(i, j) > pair_key
+    return bool(min(i, j) * distance.shape[0] + max(i, j) > pair_key)
 
 
 @kernel()

@@ -105,10 +105,10 @@ def best_order(
     if len(free) <= EXHAUSTIVE_STAGES:
         orders = []
         for arrangement in permutations(free):
-            order = list(start)
+            places = list(start)
             for stage, part in zip(free, arrangement, strict=True):
-                order[stage] = part
-            orders.append(tuple(order))
+                places[stage] = part
+            orders.append(tuple(places))
         return min(zip(costs(orders), orders, strict=True))[1]
     order, value = start, costs([start])[0]
     while True:

@@ -18,6 +18,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -216,7 +217,7 @@ def _about(place: Index, q: int, distance: Array, reach: float) -> Index:
     return np.flatnonzero(beside)
 
 
-def _incidence(sets: Index, parts: int):  # type: ignore[no-untyped-def]
+def _incidence(sets: Index, parts: int) -> Any:
     from scipy.sparse import csc_matrix
 
     count = sets.shape[1]
@@ -284,7 +285,7 @@ def _branch(sets: Index, parts: int) -> tuple[Index, int]:
     result = milp(
         -np.ones(sets.shape[0]),
         constraints=LinearConstraint(_incidence(sets, parts), -np.inf, 1.0),
-        integrality=np.ones(sets.shape[0]),
+        integrality=np.ones(sets.shape[0], np.int64),
         bounds=Bounds(0.0, 1.0),
         options={"node_limit": BRANCH_NODES, "time_limit": SECONDS},
     )

@@ -16,7 +16,8 @@ def next_random(state: Any) -> float:
     x ^= x >> 7
     x ^= (x << 17) & 0x7FFFFFFFFFFFFFFF
     state[0] = x
-    return (x >> 11) / 4503599627370496.0
+    share: float = (x >> 11) / 4503599627370496.0
+    return share
 
 
 @kernel()
@@ -77,7 +78,7 @@ def anneal(
             where[p] = left
             left += 1
     size //= stages
-    most = size
+    most: int = size
     cooling = math.exp(math.log(cold / hot) / steps)
     temperature = hot
     for _ in range(steps):

@@ -148,7 +148,7 @@ def _matrix(sets: Index, rows: int, cuts: Index) -> Any:
     plain = csr_matrix((np.ones(sets.size), (sets.ravel(), column)), (rows, sets.shape[0]))
     if cuts.shape[0] == 0:
         return plain.tocsc()
-    held = sum(plain[cuts[:, k]] for k in range(3))
+    held = plain[cuts[:, 0]] + plain[cuts[:, 1]] + plain[cuts[:, 2]]
     held.data = (held.data >= 2).astype(float)
     return vstack([plain, held]).tocsc()
 

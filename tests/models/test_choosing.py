@@ -274,3 +274,20 @@ def test_the_usual_rules_choice_is_the_best_of_all_combinations(
     assert usual_fraction([readings[one] for one in chosen]) == pytest.approx(
         min(usual_fraction([readings[one] for one in names]) for names in every)
     )
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("limit", [0.05, 0.07, 0.1, 0.15])
+def test_gap_of_at_most_one_set_on_the_shipped_workshop_tray(limit: float, capsys) -> None:
+    import time
+
+    estimate = estimate_tray(load_tray(SAMPLES / "tray_workshop.csv"))
+    start = time.perf_counter()
+    found = disjoint_sets(estimate, load_circuit("heron"), NOON, limit)
+    with capsys.disabled():
+        print(
+            f"\nworkshop tray, limit {limit}: {len(found.sets)} sets of at most {found.bound} "
+            f"(parts divided by stages: {found.by_count}), {time.perf_counter() - start:.1f} s"
+        )
+    assert found.bound < found.by_count
+    assert found.bound - len(found.sets) <= 1
