@@ -308,7 +308,7 @@ def test_progress_reaches_one_and_never_falls(source: Path) -> None:
 def test_full_disk(source: Path) -> None:
     # A limit on file size stands for a full disk.
     script = (
-        "import pathlib, sys\n"
+        "import resource, sys\n"
         "from sweepset.models.errors import InputError\n"
         "from sweepset.render.setup import TakeSettings\n"
         "from sweepset.render.take import render_file\n"
