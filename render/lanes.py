@@ -218,11 +218,13 @@ class LaneRunner:
     def _run_into(self, out: Array, x: Array, gate: Array, first: int) -> Tally:
         """Run all lanes, the fast loop first, and write what follows the warm-up into `out`."""
         tally = self._fast_pass(out, x, gate, first, passes=1)
-        again = self._unfit(out, tally)
+        again = np.arange(self.lanes) if tally is None else self._unfit(out, tally)
+        if tally is None:
+            tally = np.zeros((self.lanes, TALLIES))
         if len(again):
-            # Lanes are independent: what one lane gets does not depend on its neighbours.
             better = np.empty_like(out)
             counted = self._fast_pass(better, x, gate, first, passes=2)
+            assert counted is not None
             out[:, again] = better[:, again]
             tally[again] = counted[again]
             again = again[np.isin(again, self._unfit(better, counted))]
@@ -240,8 +242,14 @@ class LaneRunner:
             careful_steps=steps,
         )
 
-    def _fast_pass(self, out: Array, x: Array, gate: Array, first: int, *, passes: int) -> Array:
-        """Run the fast loop over all lanes and return its tally, (lanes, TALLIES)."""
+    def _fast_pass(
+        self, out: Array, x: Array, gate: Array, first: int, *, passes: int
+    ) -> Array | None:
+        """Run the fast loop over all lanes and return its tally, (lanes, TALLIES).
+
+        With one pass it gives up, and returns None, as soon as most lanes need more: noise,
+        for one, cannot be extrapolated, and going on would be work for nothing.
+        """
         run, size = self._fast[passes - 1]
         state = np.zeros((STATES, self.stages, self.lanes))
         work = np.zeros(size)
@@ -252,7 +260,10 @@ class LaneRunner:
                 CONDUCTING_V, *self.common_mode, self.keep, work, tally,
             )  # fmt: skip
 
-        return self._in_pieces(piece, out, x, gate, first)
+        def hopeless(tally: Array) -> bool:
+            return passes == 1 and len(self._past_limits(tally)) > self.lanes // 2
+
+        return self._in_pieces(piece, out, x, gate, first, hopeless)
 
     def _carefully(
         self,
@@ -276,7 +287,8 @@ class LaneRunner:
                     *self.rails, tally,
                 )  # fmt: skip
 
-        counted = self._in_pieces(piece, better, x, gate, first)
+        counted = self._in_pieces(piece, better, x, gate, first, lambda _tally: False)
+        assert counted is not None
         out[:, chosen] = better[:, chosen]
         tally[chosen] = counted[chosen]
 
@@ -287,7 +299,8 @@ class LaneRunner:
         x: Array,
         gate: Array,
         first: int,
-    ) -> Array:
+        give_up: Callable[[Array], bool],
+    ) -> Array | None:
         """Feed a loop piece by piece, so that its working set stays in the cache."""
         made = np.empty((PIECE, self.lanes))
         warming, tally = np.zeros((self.lanes, TALLIES)), np.zeros((self.lanes, TALLIES))
@@ -298,18 +311,23 @@ class LaneRunner:
             piece(block, bus, rows, tally if begin >= first else warming)
             if begin >= first:
                 out[begin - first : end - first] = rows
+                if give_up(tally):
+                    return None
         return tally
 
-    def _unfit(self, out: Array, tally: Array) -> npt.NDArray[np.intp]:
-        """Return the lanes that came to a rail or whose last pass corrected too much.
-
-        A lane that ran away ends in NaN, which the loop's comparisons pass over.
-        """
+    def _past_limits(self, tally: Array) -> npt.NDArray[np.intp]:
+        """Return the lanes that came to a rail, corrected too much or had the gate run away."""
         limit = min(abs(rail) for rail in self.rails)
         fit = (tally[:, TOP] < limit) & (tally[:, CHANGE] < self.change_limit_v)
         fit &= tally[:, BUS] < BUS_STEP_V
-        fit &= np.isfinite(out[-1])
         return np.flatnonzero(~fit)
+
+    def _unfit(self, out: Array, tally: Array) -> npt.NDArray[np.intp]:
+        """Return the lanes to be done again.
+
+        A lane that ran away ends in NaN, which the loop's comparisons pass over.
+        """
+        return np.union1d(self._past_limits(tally), np.flatnonzero(~np.isfinite(out[-1])))
 
 
 def _columns(track: Array, lanes: int, length: int, warm: int) -> Array:
