@@ -9,6 +9,7 @@ from dataclasses import dataclass
 
 import numpy.typing as npt
 
+from .chain import net_conductance_s
 from .circuit import Circuit, PlainKnob, RelaxationOscillator
 from .errors import InputError
 from .knob import knob_ohm, knob_rotation, setting_rotation
@@ -50,6 +51,44 @@ def wiper_source(circuit: Circuit, trimmer: float) -> WiperSource:
     lower = part.bottom_ohm + trimmer * part.track_ohm
     whole = upper + lower
     return WiperSource((top * lower + bottom * upper) / whole, upper * lower / whole)
+
+
+@dataclass(frozen=True)
+class BusNode:
+    """The gate bus as a node: what the half-drain network's currents meet there.
+
+    Parameters
+    ----------
+    capacitor_f : float
+        Bus capacitor [F].
+    conductance_s : float
+        All conductance from the bus to quiet nodes, the network's included [S].
+    """
+
+    capacitor_f: float
+    conductance_s: float
+
+
+def bus_node(circuit: Circuit, trimmer: float) -> BusNode | None:
+    """Return the bus as a node at a trimmer position, or None without a bus capacitor.
+
+    A tap is taken as quiet at audio rates, loaded or not.
+    """
+    if circuit.bus.capacitor_f is None:
+        return None
+    conductance_s = _bias_conductance_s(circuit, trimmer) + 1.0 / circuit.bus.sweep_ohm
+    return BusNode(circuit.bus.capacitor_f, conductance_s + _network_load_s(circuit))
+
+
+def _bias_conductance_s(circuit: Circuit, trimmer: float) -> float:
+    """Conductance of the bias path, wiper to bus [S]."""
+    resistance_ohm = wiper_source(circuit, trimmer).resistance_ohm
+    return 1.0 / max(circuit.bus.bias_ohm + resistance_ohm, LEAST_BIAS_OHM)
+
+
+def _network_load_s(circuit: Circuit) -> float:
+    """Conductance of all stages' half-drain networks on the bus, drains at rest [S]."""
+    return circuit.stage_count * net_conductance_s(circuit)
 
 
 @dataclass(frozen=True)
@@ -168,25 +207,22 @@ def solve_bus(circuit: Circuit, trimmer: float, rate: Setting) -> BusWave:
     if not 0.0 <= trimmer <= 1.0:
         raise ValueError(f"trimmer position must be 0 to 1, got {trimmer}")
     source = wiper_source(circuit, trimmer)
-    bias_ohm = max(circuit.bus.bias_ohm + source.resistance_ohm, LEAST_BIAS_OHM)
-    network = circuit.bus.half_drain
-    load_s = 0.0
-    if network is not None:
-        load_s = circuit.stage_count / (network.from_bus_ohm + network.from_drain_ohm)
+    bias_s = _bias_conductance_s(circuit, trimmer)
+    load_s = _network_load_s(circuit)
     capacitor_f = circuit.bus.capacitor_f or 0.0
     oscillator = circuit.oscillator
     tap: Wave
     gate: Wave
     if isinstance(oscillator, RelaxationOscillator) and oscillator.tap == "direct":
         tap, gate, rotation = _solve_loaded(
-            circuit, oscillator, rate, source.open_v, 1.0 / bias_ohm, load_s
+            circuit, oscillator, rate, source.open_v, bias_s, load_s
         )
     else:
         tap, rotation = tap_wave(circuit, rate)
-        sweep_s, bias_s = 1.0 / circuit.bus.sweep_ohm, 1.0 / bias_ohm
+        sweep_s = 1.0 / circuit.bus.sweep_ohm
         whole = sweep_s + bias_s + load_s
         gate = through_rc(tap, sweep_s / whole, bias_s * source.open_v / whole, capacitor_f / whole)
-    drop = (source.open_v - gate.mean_v) * source.resistance_ohm / bias_ohm
+    drop = (source.open_v - gate.mean_v) * source.resistance_ohm * bias_s
     wiper = source.open_v - drop + circuit.reference_above_ground_v
     return BusWave(tap, gate, rotation, trimmer, wiper)
 

@@ -25,6 +25,9 @@ out : (frames, L) last stage's output [V]
 lane : (5, S, L) per part: VC, h beta/C, lambda, w, 1/w
 stage : (9, S) per stage: h/(C Rp) with other loads, a, b, c, w0, w1, w2, w3, h/(C Rnet)
 state : (8, S, L) q1, G1, G2, G3, v1..v4; carried on from call to call
+drift : (3, L) with the half-drain network: what the drains add to the gate bus [V] and its
+    last two increments; carried on likewise
+into, leak : h Gnet/Cbus and h G/Cbus of that; 0 where the bus is driven
 tally : (L, TALLIES) counts and extremes, added to; see the constants below
 """
 
@@ -124,14 +127,18 @@ def lane_kernel(
     OTOP = OCH + L
     OGS, OGD, OLO, OHI = (OTOP + (i + 1) * L for i in range(4))
     OBUS = OHI + L
-    SIZE = OBUS + L
+    OGATE = OBUS + L
+    ODRIFT, OI1, OI2 = (OGATE + (i + 1) * L for i in range(3))
+    SIZE = OI2 + L
     feedback = frm >= 0
     # The gate moves slowly: its side of the law is evaluated now and then, and carried on
     # by its second-order expansion in between. The caller's BUS_STEP_V bounds the step.
     carried = soft and passes == 1 and not half_drain
 
     @kernel(boundscheck=False)
-    def run(x, gate, out, lane, stage, state, conduct, low, high, keep, work, tally):
+    def run(
+        x, gate, out, lane, stage, state, drift, into, leak, conduct, low, high, keep, work, tally
+    ):
         for s in range(S):
             for j in range(L):
                 i = s * L + j
@@ -141,14 +148,22 @@ def lane_kernel(
                     work[OVC + k * SL + i] = lane[k, s, j]
         for i in range(OCH, SIZE):
             work[i] = 0.0
+        if half_drain:
+            for j in range(L):
+                for k in range(3):
+                    work[ODRIFT + k * L + j] = drift[k, j]
         for n in range(x.shape[0]):
+            for j in range(L):
+                work[OGATE + j] = gate[n, j]
+                if half_drain:
+                    work[OGATE + j] += work[ODRIFT + j]
             # Start voltages, extrapolated; the law's two sides in loops of their own, short
             # enough for several lanes' chains of dependent steps to overlap.
             anchor = n % CARRY == 0
             for s in range(S):
                 for j in range(L):
                     i = s * L + j
-                    work[OU + i] = keep * gate[n, j] - work[OVC + i]
+                    work[OU + i] = keep * work[OGATE + j] - work[OVC + i]
                     work[OV + i] = (
                         4.0 * (work[OV1 + i] + work[OV3 + i]) - 6.0 * work[OV2 + i] - work[OV4 + i]
                     )
@@ -199,7 +214,7 @@ def lane_kernel(
                         past += work[OQ + i]
                         d, alpha, bend = stage_map(
                             work[OV + i], work[OPD + i], work[OSD + i], work[OSRC + i],
-                            work[OPS + i], work[OSS + i], past, gate[n, j], work[OHB + i],
+                            work[OPS + i], work[OSS + i], past, work[OGATE + j], work[OHB + i],
                             work[OLAM + i], work[OPW + i], keep, hs, hn, w0, soft, bent, half_drain,
                         )  # fmt: skip
                         work[OHIST + i] = past
@@ -256,13 +271,24 @@ def lane_kernel(
                     work[OV1 + i] = v
             for j in range(L):
                 work[OTOP + j] = max(work[OTOP + j], abs(work[OX + j]))
-            for j in range(L):
                 out[n, j] = work[OX + j]
+            if half_drain:
+                # The bus is slow: the explicit third-order rule follows it.
+                for j in range(L):
+                    total = 0.0
+                    for s in range(S):
+                        total += work[OV1 + s * L + j]
+                    step = into * total - leak * work[ODRIFT + j]
+                    work[ODRIFT + j] += (
+                        23.0 * step - 16.0 * work[OI1 + j] + 5.0 * work[OI2 + j]
+                    ) / 12.0
+                    work[OI2 + j] = work[OI1 + j]
+                    work[OI1 + j] = step
             if n % COUNT_EVERY == 0:
                 for s in range(S):
                     for j in range(L):
                         v = work[OV1 + s * L + j]
-                        own = keep * gate[n, j] + (1.0 - keep) * v
+                        own = keep * work[OGATE + j] + (1.0 - keep) * v
                         work[OGS + j] += 1.0 if own > conduct else 0.0
                         work[OGD + j] += 1.0 if own - v > conduct else 0.0
                         work[OLO + j] += 1.0 if v < low else 0.0
@@ -272,6 +298,10 @@ def lane_kernel(
                 i = s * L + j
                 for k in range(STATES):
                     state[k, s, j] = work[k * SL + i]
+        if half_drain:
+            for j in range(L):
+                for k in range(3):
+                    drift[k, j] = work[ODRIFT + k * L + j]
         for j in range(L):
             tally[j, GATE_SOURCE] += COUNT_EVERY * work[OGS + j]
             tally[j, GATE_DRAIN] += COUNT_EVERY * work[OGD + j]
@@ -322,6 +352,9 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         lane,
         stage,
         state,
+        drift,
+        into,
+        leak,
         conduct,
         low,
         high,
@@ -345,6 +378,8 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
         fed = 0.0
         for n in range(x.shape[0]):
             bus = gate[n, j]
+            if half_drain:
+                bus += drift[0, j]
             for s in range(S):
                 hist[s] = (
                     state[Q1, s, j]
@@ -443,6 +478,7 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                     done = True
                     break
             clipped = False
+            total = 0.0
             for s in range(S):
                 if ys[s] <= rail_low or ys[s] >= rail_high:
                     clipped = True
@@ -455,12 +491,18 @@ def careful_kernel(soft: bool, half_drain: bool) -> Any:
                 state[V3, s, j] = state[V2, s, j]
                 state[V2, s, j] = state[V1, s, j]
                 state[V1, s, j] = v[s]
+                total += v[s]
                 if n % COUNT_EVERY == 0:
                     own = keep * bus + (1.0 - keep) * v[s]
                     tally[j, GATE_SOURCE] += COUNT_EVERY if own > conduct else 0.0
                     tally[j, GATE_DRAIN] += COUNT_EVERY if own - v[s] > conduct else 0.0
                     tally[j, LOW_INPUT] += COUNT_EVERY if v[s] < low else 0.0
                     tally[j, HIGH_INPUT] += COUNT_EVERY if v[s] > high else 0.0
+            if half_drain:
+                step = into * total - leak * drift[0, j]
+                drift[0, j] += (23.0 * step - 16.0 * drift[1, j] + 5.0 * drift[2, j]) / 12.0
+                drift[2, j] = drift[1, j]
+                drift[1, j] = step
             tally[j, RAIL] += 1.0 if clipped else 0.0
             tally[j, STUCK] += 0.0 if done else 1.0
             out[n, j] = ys[S - 1]

@@ -22,6 +22,7 @@ import soxr
 from scipy.signal import lfilter
 
 from ..models.circuit import Circuit
+from ..models.gatebus import BusNode
 from ..models.jfet import Jfet
 from .lanes import LaneRunner, Tally
 from .plan import EnginePlan
@@ -34,6 +35,7 @@ LANES = 32
 BUNDLES = 2  # slices of a stretch = LANES x BUNDLES, whatever the machine's cores
 SLICE_STEPS = 32768
 MOST_STEPS = 4_000_000  # in one stretch, all channels together: 32 MB for each array of it
+BUS_FORGOTTEN = 1e-5
 RESAMPLER = "VHQ"
 
 
@@ -135,6 +137,9 @@ class Engine:
     gate : callable
         ``gate(start, count, rate_hz)`` gives the gate bus at `count` steps of
         ``1/rate_hz`` from step `start`, which may be negative, shape (count,) [V].
+    bus : BusNode, optional
+        The gate bus as a node, into which a half-drain network leads audio. Left out, the
+        bus is driven: `gate` is all of it.
     chain_only : bool
         Leave couplings and mix out: the block is the first stage's input and the
         result the last stage's output.
@@ -151,6 +156,7 @@ class Engine:
         plan: EnginePlan,
         gate: Gate,
         *,
+        bus: BusNode | None = None,
         chain_only: bool = False,
         workers: int | None = None,
     ) -> None:
@@ -163,13 +169,18 @@ class Engine:
         self._rails = circuit.rails_v
         # Each slice is at least twice its warm-up, which bounds what the warm-ups cost, and
         # all slices of all channels together fit the memory set aside.
-        steps = max(SLICE_STEPS, 2 * plan.warm_up_steps)
+        self._warm = plan.warm_up_steps
+        if bus is not None and circuit.bus.half_drain is not None:
+            # The bus must forget too; what the drains add to it is small from the start.
+            time_constant_s = bus.capacitor_f / bus.conductance_s
+            self._warm += int(-np.log(BUS_FORGOTTEN) * time_constant_s * self.rate_hz)
+        steps = max(SLICE_STEPS, 2 * self._warm)
         lanes = LANES
         while lanes > 1 and lanes * BUNDLES * steps * channels > MOST_STEPS:
             lanes //= 4
         self._slice_steps = steps
         self._runner = LaneRunner(
-            circuit, [list(jfets)], 1.0 / self.rate_hz, plan.rules, max(lanes, 1)
+            circuit, [list(jfets)], 1.0 / self.rate_hz, plan.rules, max(lanes, 1), bus
         )
         self._workers = workers or os.cpu_count() or 1
         self._up = self._resampler(sample_rate, self.rate_hz)
@@ -187,7 +198,7 @@ class Engine:
         )
         self._waiting: list[Array] = []
         self._waiting_steps = 0
-        self._tail = np.zeros((plan.warm_up_steps, channels))
+        self._tail = np.zeros((self._warm, channels))
         self._done_steps = 0
         self._frames_in = self._frames_out = 0
         self._tally = Tally()
@@ -295,7 +306,7 @@ class Engine:
 
     def _chain(self, x: Array) -> Array:
         """Cut a stretch into slices, run them side by side and join them."""
-        warm = self.plan.warm_up_steps
+        warm = self._warm
         bundle = self._runner.lanes * -(-len(x) // (self._runner.lanes * BUNDLES))
         padding = np.zeros((BUNDLES * bundle - len(x), self._channels))
         history = np.concatenate([self._tail, x, padding])

@@ -16,6 +16,7 @@ import numpy.typing as npt
 
 from ..models.chain import net_conductance_s
 from ..models.circuit import Circuit
+from ..models.gatebus import BusNode
 from ..models.jfet import Jfet
 from .chain_kernels import (
     BUS,
@@ -112,6 +113,9 @@ class LaneRunner:
         One per stage.
     lanes : int
         Number of lanes.
+    bus : BusNode, optional
+        The gate bus as a node, into which a half-drain network leads audio. Left out, the
+        bus is driven: it is what is given, whatever the drains do.
     """
 
     def __init__(
@@ -121,6 +125,7 @@ class LaneRunner:
         step_s: float,
         rules: tuple[Rule, ...],
         lanes: int,
+        bus: BusNode | None = None,
     ) -> None:
         count = circuit.stage_count
         self.lanes = lanes
@@ -152,6 +157,10 @@ class LaneRunner:
         )
         self.keep = 1.0 - circuit.half_drain_share
         self.half_drain = circuit.bus.half_drain is not None
+        self.into_bus = self.bus_leak = 0.0
+        if bus is not None and self.half_drain:
+            self.into_bus = step_s * net / bus.capacitor_f
+            self.bus_leak = step_s * bus.conductance_s / bus.capacitor_f
         loop = circuit.feedback
         self.frm = -1 if loop is None else loop.from_stage - 1
         self.rails = circuit.rails_v
@@ -252,11 +261,13 @@ class LaneRunner:
         """
         run, size = self._fast[passes - 1]
         state = np.zeros((STATES, self.stages, self.lanes))
+        drift = np.zeros((3, self.lanes))
         work = np.zeros(size)
 
         def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
             run(
                 x, gate, out, self.lane_table, self.stage_table, state,
+                drift, self.into_bus, self.bus_leak,
                 CONDUCTING_V, *self.common_mode, self.keep, work, tally,
             )  # fmt: skip
 
@@ -277,12 +288,14 @@ class LaneRunner:
         """Do the chosen lanes again with the careful loop."""
         careful = careful_kernel(self.soft, self.half_drain)
         state = np.zeros((STATES, self.stages, self.lanes))
+        drift = np.zeros((3, self.lanes))
         better = np.empty_like(out)
 
         def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
             for lane in chosen:
                 careful(
                     x, gate, out, self.lane_table, self.stage_table, state,
+                drift, self.into_bus, self.bus_leak,
                     CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
                     *self.rails, tally,
                 )  # fmt: skip

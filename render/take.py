@@ -23,6 +23,7 @@ import numpy.typing as npt
 from ..models.atomic import atomic_path
 from ..models.circuit import Circuit, load_circuit
 from ..models.errors import InputError
+from ..models.gatebus import bus_node
 from ..models.jfet import NOMINAL_CELSIUS, Jfet
 from ..models.quantity import Setting, parse_rate, parse_trim
 from .audio import (
@@ -502,7 +503,14 @@ class _Run:
     ) -> None:
         self._full_scale_v = setup.settings.full_scale_v
         self._engine = Engine(
-            setup.circuit, setup.jfets, sample_rate, channels, plan, setup.gate, workers=workers
+            setup.circuit,
+            setup.jfets,
+            sample_rate,
+            channels,
+            plan,
+            setup.gate,
+            bus=None if setup.bus is None else bus_node(setup.circuit, setup.bus.trimmer),
+            workers=workers,
         )
 
     def through(self, blocks: Iterable[Array]) -> Iterator[Array]:
