@@ -76,8 +76,20 @@ def bus_node(circuit: Circuit, trimmer: float) -> BusNode | None:
     """
     if circuit.bus.capacitor_f is None:
         return None
-    conductance_s = _bias_conductance_s(circuit, trimmer) + 1.0 / circuit.bus.sweep_ohm
-    return BusNode(circuit.bus.capacitor_f, conductance_s + _network_load_s(circuit))
+    return BusNode(circuit.bus.capacitor_f, bus_conductance_s(circuit, trimmer))
+
+
+def bus_conductance_s(circuit: Circuit, trimmer: float) -> float:
+    """Return all conductance from the gate bus to quiet nodes, the tap held among them [S]."""
+    sweep_s = 1.0 / circuit.bus.sweep_ohm
+    return _bias_conductance_s(circuit, trimmer) + sweep_s + _network_load_s(circuit)
+
+
+def held_bus_v(circuit: Circuit, trimmer: float) -> float:
+    """Return where the gate bus rests with the tap held at the reference rail [V]."""
+    bias_s = _bias_conductance_s(circuit, trimmer)
+    share = bias_s / bus_conductance_s(circuit, trimmer)
+    return share * wiper_source(circuit, trimmer).open_v
 
 
 def _bias_conductance_s(circuit: Circuit, trimmer: float) -> float:

@@ -92,20 +92,39 @@ def only_set(args: argparse.Namespace) -> str:
     return str(args.parts[0])
 
 
-def quantity(text: str, unit: str, option: str) -> float:
-    """Return a written quantity in SI units.
+def quantity(
+    text: str, unit: str, option: str, *, above: float | None = None, most: float | None = None
+) -> float:
+    """Return a written quantity in SI units; a share for "%".
+
+    Parameters
+    ----------
+    text, unit, option : str
+        What was written, the unit it should have, and the option's name for messages.
+    above : float, optional
+        The quantity must be greater than this.
+    most : float, optional
+        The quantity must be from 0 to this.
 
     Raises
     ------
     InputError
-        If it cannot be read; names the option.
+        If it cannot be read or is out of range; names the option.
     """
-    from ...models.quantity import parse_quantity
+    from ...models.quantity import format_quantity, parse_quantity
 
     try:
-        return parse_quantity(text, unit)
+        value = parse_quantity(text, unit)
     except ValueError as fault:
         raise InputError(f"{option}: {fault}") from None
+    if above is not None and not value > above:
+        raise InputError(f"{option} {text}: expected more than {format_quantity(above, unit)}")
+    if most is not None and not 0.0 <= value <= most:
+        raise InputError(
+            f"{option} {text}: expected {format_quantity(0.0, unit)} to "
+            f"{format_quantity(most, unit)}"
+        )
+    return value
 
 
 def setting(parse: Callable[[str], Setting], text: str, option: str) -> Setting:

@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import argparse
 
-from . import _settings
+from . import _meter, _settings
 
-HELP = "find a set's bias: trimmer position, voltages, travel, stagger and stall"
+HELP = "find a set's bias: trimmer position, test-point voltages, travel, stagger and stall"
 EPILOG = """\
 examples:
   sweepset trim --tray tray.csv --set J07,J12,J31,J40
   sweepset trim --circuit my_unit.toml --tray tray.csv --set J07,J12,J31,J40 --rate 9:00
+  sweepset trim --tray tray.csv --set J07,J12,J31,J40 --meter "1 Mohm" --stall-limit 5%
   sweepset trim --set=-2.10V/4.2mA,-2.12V/4.3mA,-2.15V/4.3mA,-2.11V/4.2mA --trim 2.31V
 """
 
@@ -22,6 +23,23 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     _settings.add_rate_argument(parser)
     _settings.add_trim_argument(parser)
     _settings.add_celsius_argument(parser)
+    parser.add_argument(
+        "--meter",
+        metavar="OHMS",
+        default="10 Mohm",
+        help="the meter's input resistance (default: 10 Mohm)",
+    )
+    parser.add_argument(
+        "--tolerance",
+        metavar="PERCENT",
+        default="1%",
+        help="tolerance of the fixed resistors (default: 1%%)",
+    )
+    parser.add_argument(
+        "--stall-limit",
+        metavar="PERCENT",
+        help="also find the nearest E24 sweep resistor that brings stall within this",
+    )
     _settings.add_json_argument(parser)
 
 
@@ -30,9 +48,11 @@ def run(args: argparse.Namespace) -> int:
     from ...models.circuit import load_circuit
     from ...models.cycle import analyse_cycle
     from ...models.quantity import parse_rate, parse_trim
+    from ...models.sweepadvice import advise_sweep
+    from ...models.testpoints import Tolerances, how_to_hold, measure_points
     from ..setup import TakeSettings, set_up
     from ._figures import bias_record, bias_rows
-    from ._screen import print_json, print_table, warn
+    from ._screen import print_json, print_table, progress, say, warn
     from ._sets import read_set
 
     circuit = load_circuit(args.circuit)
@@ -65,8 +85,38 @@ def run(args: argparse.Namespace) -> int:
             ("short of a uniform set by", f"{100.0 * bias.loss:.0f} %"),
         ]
         warn(bias.warnings)
+    points = measure_points(
+        setup.circuit,
+        setup.bus.trimmer,
+        settings.rate,
+        meter_ohm=_settings.quantity(args.meter, "ohm", "--meter", above=0.0),
+        tolerances=Tolerances(
+            resistor=_settings.quantity(args.tolerance, "%", "--tolerance", most=0.5)
+        ),
+    )
+    hold = how_to_hold(setup.circuit)
+    advice = None
+    if args.stall_limit is not None:
+        limit = _settings.quantity(args.stall_limit, "%", "--stall-limit", most=1.0)
+        with progress() as tell:
+            advice = advise_sweep(
+                setup.circuit,
+                setup.jfets,
+                settings.rate,
+                limit,
+                tell and (lambda share: tell("trying sweep resistors", share)),
+            )
     if args.json:
+        record |= {"test_points": _meter.point_records(points), "hold": hold}
+        if advice is not None:
+            record["sweep_advice"] = _meter.sweep_record(advice)
         print_json(record)
-    else:
-        print_table("", ("figure", "value"), rows)
+        return 0
+    print_table("", ("figure", "value"), rows)
+    print_table("", _meter.POINT_COLUMNS, _meter.point_rows(points))
+    for sentence in hold:
+        say(sentence)
+    if advice is not None:
+        print_table("", _meter.SWEEP_COLUMNS, _meter.sweep_rows(advice))
+        say(_meter.sweep_sentence(advice))
     return 0
