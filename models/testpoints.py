@@ -50,7 +50,7 @@ class Tolerances:
 
 
 @dataclass(frozen=True)
-class TestPoint:
+class MeterPoint:
     """One point to measure.
 
     Parameters
@@ -84,7 +84,7 @@ def measure_points(
     *,
     meter_ohm: float = DEFAULT_METER_OHM,
     tolerances: Tolerances | None = None,
-) -> list[TestPoint]:
+) -> list[MeterPoint]:
     """Return the points to measure, lowest impedance first.
 
     Parameters
@@ -108,7 +108,7 @@ def measure_points(
     for name, true_v in values.items():
         source_ohm = sources[name]
         points.append(
-            TestPoint(
+            MeterPoint(
                 name=name,
                 true_v=true_v,
                 shown_v=true_v * meter_ohm / (meter_ohm + source_ohm),

@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
+from ._spreadsheet import safe_cell
+
 if TYPE_CHECKING:
     from ...models.choosing import DisjointSets, SetFigures
     from ...models.tray import Tray
@@ -107,8 +109,8 @@ def spreadsheet(records: Sequence[dict[str, Any]], left: Sequence[dict[str, Any]
     for one in records:
         cells = [one.get(key) for key in figures]
         numbers = ["" if cell is None else f"{cell:.6g}" for cell in cells]
-        writer.writerow([one["set"], *one["parts"], *numbers, ""])
+        writer.writerow([safe_cell(one["set"]), *map(safe_cell, one["parts"]), *numbers, ""])
     for one in left:
         blanks = [""] * (stages - 1 + len(figures))
-        writer.writerow(["spare", one["part"], *blanks, one["reason"]])
+        writer.writerow(["spare", safe_cell(one["part"]), *blanks, safe_cell(one["reason"])])
     return out.getvalue()

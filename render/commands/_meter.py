@@ -6,13 +6,13 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from ...models.sweepadvice import SweepAdvice
-    from ...models.testpoints import TestPoint
+    from ...models.testpoints import MeterPoint
 
 POINT_COLUMNS = ("measure to ground, in this order", "true", "tolerances", "meter shows", "behind")
 SWEEP_COLUMNS = ("sweep resistor", "trimmer", "travel", "stall", "stagger")
 
 
-def point_rows(points: list[TestPoint]) -> list[tuple[str, ...]]:
+def point_rows(points: list[MeterPoint]) -> list[tuple[str, ...]]:
     """Return the rows of a table of test points."""
     from ...models.quantity import format_quantity
 
@@ -28,7 +28,7 @@ def point_rows(points: list[TestPoint]) -> list[tuple[str, ...]]:
     ]
 
 
-def point_records(points: list[TestPoint]) -> list[dict[str, Any]]:
+def point_records(points: list[MeterPoint]) -> list[dict[str, Any]]:
     """Return test points as plain values."""
     from dataclasses import asdict
 

@@ -59,6 +59,21 @@ def add_celsius_argument(parser: argparse.ArgumentParser) -> None:
     )
 
 
+def add_meter_argument(parser: argparse.ArgumentParser) -> None:
+    """Add ``--meter``."""
+    parser.add_argument(
+        "--meter",
+        metavar="OHMS",
+        default="10 Mohm",
+        help="the meter's input resistance (default: 10 Mohm)",
+    )
+
+
+def meter_ohm(args: argparse.Namespace) -> float:
+    """Return the resistance of ``--meter`` [ohm]."""
+    return quantity(args.meter, "ohm", "--meter", above=0.0)
+
+
 def add_json_argument(parser: argparse.ArgumentParser) -> None:
     """Add ``--json``."""
     parser.add_argument("--json", action="store_true", help="print the figures as JSON")

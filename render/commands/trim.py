@@ -23,12 +23,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     _settings.add_rate_argument(parser)
     _settings.add_trim_argument(parser)
     _settings.add_celsius_argument(parser)
-    parser.add_argument(
-        "--meter",
-        metavar="OHMS",
-        default="10 Mohm",
-        help="the meter's input resistance (default: 10 Mohm)",
-    )
+    _settings.add_meter_argument(parser)
     parser.add_argument(
         "--tolerance",
         metavar="PERCENT",
@@ -89,7 +84,7 @@ def run(args: argparse.Namespace) -> int:
         setup.circuit,
         setup.bus.trimmer,
         settings.rate,
-        meter_ohm=_settings.quantity(args.meter, "ohm", "--meter", above=0.0),
+        meter_ohm=_settings.meter_ohm(args),
         tolerances=Tolerances(
             resistor=_settings.quantity(args.tolerance, "%", "--tolerance", most=0.5)
         ),

@@ -1,0 +1,169 @@
+"""Plots, readable in grey and by colour-blind eyes: lines differ in dash and weight too.
+
+Same input, same bytes: no dates, no random identifiers.
+"""
+
+from __future__ import annotations
+
+import io
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from ..models.atomic import atomic_path
+from ..models.cycle import Cycle
+from ..models.errors import InputError
+from ..models.estimate import ResistanceBand
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+FORMATS = ("png", "svg")
+# Dark enough in grey, apart for the colour-blind (hues about blue and orange), and never
+# told apart by hue alone.
+INKS = ("#1b3a57", "#b4530a", "#4a4a4a", "#2a7f9e", "#8a6d1a", "#7a2f5e")
+DASHES: tuple[Any, ...] = ("-", (0, (6, 2)), (0, (2, 2)), (0, (8, 2, 2, 2)))
+NAMED_PARTS = 8
+MANY_STAGES = 6
+PNG_DPI = 160
+
+
+def figure_format(path: str | Path) -> str:
+    """Return the format that a file's ending asks for.
+
+    Raises
+    ------
+    InputError
+        If it is neither ``.png`` nor ``.svg``.
+    """
+    ending = Path(path).suffix.lower().removeprefix(".")
+    if ending not in FORMATS:
+        raise InputError(
+            f"{path}: plots are written as PNG or SVG; give a name ending in .png or .svg"
+        )
+    return ending
+
+
+def _new_figure(width: float, height: float) -> tuple[Figure, Any]:
+    from matplotlib import rcParams
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    # Text stays text in SVG, and identifiers are made from this salt, not drawn at random.
+    rcParams["svg.fonttype"] = "none"
+    rcParams["svg.hashsalt"] = "sweepset"
+    figure = Figure(figsize=(width, height), layout="constrained")
+    FigureCanvasAgg(figure)
+    return figure, figure.add_subplot()
+
+
+def figure_bytes(figure: Figure, form: str) -> bytes:
+    """Return a figure as the bytes of a PNG or SVG file."""
+    stream = io.BytesIO()
+    metadata = {"Date": None} if form == "svg" else {"Software": None}
+    figure.savefig(stream, format=form, dpi=PNG_DPI, metadata=metadata)
+    return stream.getvalue()
+
+
+def save_figure(figure: Figure, path: str | Path) -> None:
+    """Write a figure whole or not at all; the ending gives the format."""
+    data = figure_bytes(figure, figure_format(path))
+    with atomic_path(Path(path)) as temporary:
+        temporary.write_bytes(data)
+
+
+def resistance_figure(
+    bands: Sequence[tuple[str, ResistanceBand]],
+    window_v: tuple[float, float] | None = None,
+    window_name: str = "",
+) -> Figure:
+    """Return channel resistance against gate voltage, all parts together.
+
+    Parameters
+    ----------
+    bands : sequence of (str, ResistanceBand)
+        Label and curve of each part.
+    window_v : (float, float), optional
+        The gate's sweep in a circuit, shaded [V].
+    window_name : str
+        What the window belongs to.
+    """
+    figure, axes = _new_figure(8.0, 5.2)
+    named = len(bands) <= NAMED_PARTS
+    for number, (label, band) in enumerate(bands):
+        ink = INKS[number % len(INKS)] if named else "#333333"
+        dash = DASHES[number % len(DASHES)] if named else "-"
+        axes.fill_between(
+            band.gate_v, band.low_ohm, band.high_ohm, color=ink, alpha=0.15 if named else 0.05, lw=0
+        )
+        axes.plot(
+            band.gate_v, band.resistance_ohm, color=ink, ls=dash, lw=1.4 if named else 0.6,
+            label=label if named else None,
+        )  # fmt: skip
+    if window_v is not None:
+        axes.axvspan(
+            *window_v, facecolor="#d9d9d9", edgecolor="#555555", hatch="//", alpha=0.35, lw=0.5
+        )
+        axes.text(
+            float(np.mean(window_v)), 0.98, f"sweep of {window_name}", ha="center", va="top",
+            transform=axes.get_xaxis_transform(), fontsize=9,
+            bbox={"facecolor": "white", "edgecolor": "none", "pad": 2.0},
+        )  # fmt: skip
+    axes.set_yscale("log")
+    axes.set_ylim(100.0, 1e6)
+    axes.set_xlabel("gate voltage, from the source [V]")
+    axes.set_ylabel("channel resistance at small signal [ohm]")
+    axes.set_title(
+        f"Channel resistance of {len(bands)} part{'s' * (len(bands) != 1)}, with 95 % bands"
+    )
+    axes.grid(True, which="major", color="#cccccc", lw=0.6)
+    if named and bands:
+        axes.legend(frameon=False, ncols=2)
+    return figure
+
+
+def cycle_figure(cycle: Cycle, labels: Sequence[str]) -> Figure:
+    """Return a cycle's notch tracks and the stages' break frequencies, stalls marked.
+
+    Parameters
+    ----------
+    cycle : Cycle
+        What the set does.
+    labels : sequence of str
+        The parts in stage order.
+    """
+    # Many stages leave a low strip of a page: a wide picture fills it.
+    figure, axes = _new_figure(8.0 if len(labels) <= MANY_STAGES else 12.0, 4.2)
+    draw_breaks(axes, cycle, labels)
+    draw_notches(axes, cycle)
+    axes.set_yscale("log")
+    axes.set_xlim(0.0, float(cycle.time_s[-1]))
+    axes.set_xlabel("time in the cycle [s]")
+    axes.set_ylabel("frequency [Hz]")
+    axes.grid(True, which="major", color="#dddddd", lw=0.6)
+    figure.legend(frameon=False, fontsize=8, loc="outside right upper")
+    return figure
+
+
+def draw_notches(axes: Axes, cycle: Cycle) -> None:
+    """Draw the notch tracks, heavy."""
+    for number, track in enumerate(cycle.notch_hz.T):
+        axes.plot(
+            cycle.time_s, track, color="black", lw=2.4, label="notches" if number == 0 else None
+        )
+
+
+def draw_breaks(axes: Axes, cycle: Cycle, labels: Sequence[str]) -> None:
+    """Draw the stages' break frequencies, thin, with crosses where a stage has stopped."""
+    for number, (label, track) in enumerate(zip(labels, cycle.break_hz.T, strict=True)):
+        ink, dash = INKS[number % len(INKS)], DASHES[number % len(DASHES)]
+        axes.plot(
+            cycle.time_s, track, color=ink, ls=dash, lw=1.1, label=f"stage {number + 1}: {label}"
+        )
+        stopped = np.flatnonzero(cycle.stopped[:, number])[::6]
+        axes.plot(cycle.time_s[stopped], track[stopped], ls="", marker="x", ms=4, color=ink)
+    if cycle.stopped.any():
+        axes.plot([], [], ls="", marker="x", ms=4, color="#333333", label="stopped")
