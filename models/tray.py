@@ -270,6 +270,10 @@ class Tray:
         changed = replace(content, rows=tuple(tuple(row) for row in rows))
         return _understood(self.path, self.fixture, changed, self._digest)
 
+    def put_back(self, earlier: Tray) -> Tray:
+        """Return an earlier state of this tray, to be written over the present one."""
+        return replace(earlier, path=self.path, _digest=self._digest)
+
     def write(self, path: str | Path | None = None) -> Tray:
         """Write the tray, whole or not at all, and return it as it now is on the disk.
 
