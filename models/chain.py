@@ -13,6 +13,7 @@ With equal arms and no feedback this is the first-order all-pass
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -60,18 +61,41 @@ def break_hz(circuit: Circuit, channel_conductance_s: npt.ArrayLike) -> Array:
     return np.asarray(total / (2.0 * np.pi * capacitors_f(circuit)))
 
 
-def stage_gains(circuit: Circuit) -> tuple[Array, Array]:
-    """Return ``b`` and ``c`` of all stages, each of shape (stages,)."""
+@dataclass(frozen=True)
+class Gains:
+    """What resistors besides the shunts do to the signal.
+
+    Parameters
+    ----------
+    b, c : ndarray
+        The stages' gains from their input and from the feedback, shape (..., stages).
+    dry, wet : ndarray
+        Shares at the mix node, their sum 1, shape (...).
+    """
+
+    b: Array
+    c: Array
+    dry: Array
+    wet: Array
+
+
+def circuit_gains(circuit: Circuit) -> Gains:
+    """Return the gains of a circuit as printed; ``b`` and ``c`` have shape (stages,)."""
     gains = np.array([circuit.arm_gains(i) for i in range(circuit.stage_count)])
-    return gains[:, 1], gains[:, 2]
+    both = circuit.mix.dry_ohm + circuit.mix.wet_ohm
+    dry, wet = circuit.mix.wet_ohm / both, circuit.mix.dry_ohm / both
+    return Gains(gains[:, 1], gains[:, 2], np.asarray(dry), np.asarray(wet))
 
 
-def _stage_response(b: float, c: float, break_rad: Any, s: Any) -> Any:
+def _stage_response(b: Any, c: Any, break_rad: Any, s: Any) -> Any:
     return ((1.0 + c) * s - b * break_rad) / (s + break_rad)
 
 
 def wet_and_loop(
-    circuit: Circuit, break_frequency_hz: npt.ArrayLike, s_rad: npt.ArrayLike
+    circuit: Circuit,
+    break_frequency_hz: npt.ArrayLike,
+    s_rad: npt.ArrayLike,
+    gains: Gains | None = None,
 ) -> tuple[ComplexArray, ComplexArray]:
     """Return the chain's response and its loop gain at complex frequencies.
 
@@ -84,6 +108,8 @@ def wet_and_loop(
     s_rad : array_like
         Complex frequencies, shape (F,), or any shape broadcasting against
         ``(..., F)`` [rad/s].
+    gains : Gains, optional
+        In place of the circuit's own.
 
     Returns
     -------
@@ -94,18 +120,19 @@ def wet_and_loop(
     """
     w = 2.0 * np.pi * np.asarray(break_frequency_hz, float)[..., None, :]
     s = np.asarray(s_rad, complex)
-    b, c = stage_gains(circuit)
+    own = gains or circuit_gains(circuit)
+    b, c = own.b[..., None, :], own.c[..., None, :]
     shape = np.broadcast_shapes(w.shape[:-1], s.shape)
     wet = np.ones(shape, complex)
     loop = np.zeros(shape, complex)
     feedback = circuit.feedback
     around = None
     for i in range(circuit.stage_count):
-        response = _stage_response(b[i], c[i], w[..., i], s)
+        response = _stage_response(b[..., i], c[..., i], w[..., i], s)
         wet = wet * response
         if feedback is not None:
             if i == feedback.into_stage - 1:
-                around = np.full(shape, c[i], complex)
+                around = np.ones(shape, complex) * c[..., i]
             elif around is not None:
                 around = around * response
             if i == feedback.from_stage - 1 and around is not None:
@@ -129,12 +156,6 @@ def loop_gain(
     return wet_and_loop(circuit, break_frequency_hz, 2j * np.pi * np.asarray(freq_hz, float))[1]
 
 
-def mix_gains(circuit: Circuit) -> tuple[float, float]:
-    """Return the shares of dry and wet at the mix node, their sum 1."""
-    both = circuit.mix.dry_ohm + circuit.mix.wet_ohm
-    return circuit.mix.wet_ohm / both, circuit.mix.dry_ohm / both
-
-
 def unit_response(
     circuit: Circuit, break_frequency_hz: npt.ArrayLike, freq_hz: npt.ArrayLike
 ) -> ComplexArray:
@@ -156,12 +177,12 @@ def unit_response(
     """
     s = 2j * np.pi * np.asarray(freq_hz, float)
     coupling = s * circuit.input.capacitor_f * circuit.input.resistor_ohm
-    dry, wet = mix_gains(circuit)
+    gains = circuit_gains(circuit)
     mix = circuit.mix
     source_ohm = mix.dry_ohm * mix.wet_ohm / (mix.dry_ohm + mix.wet_ohm)
     rc = (source_ohm + mix.load_ohm) * mix.capacitor_f
     output = mix.load_ohm / (mix.load_ohm + source_ohm) * s * rc / (1.0 + s * rc)
-    mixed = dry + wet * wet_and_loop(circuit, break_frequency_hz, s)[0]
+    mixed = gains.dry + gains.wet * wet_and_loop(circuit, break_frequency_hz, s)[0]
     return np.asarray(coupling / (1.0 + coupling) * output * mixed)
 
 
@@ -180,7 +201,8 @@ def loop_poles_rad(circuit: Circuit, break_frequency_hz: npt.ArrayLike) -> Compl
         return np.zeros(0, complex)
     w = 2.0 * np.pi * np.asarray(break_frequency_hz, float)
     scale = float(np.exp(np.mean(np.log(w))))
-    b, c = stage_gains(circuit)
+    gains = circuit_gains(circuit)
+    b, c = gains.b, gains.c
     below, above = np.array([1.0]), np.array([c[feedback.into_stage - 1]])
     for i in range(feedback.into_stage, feedback.from_stage):
         below = np.convolve(below, [1.0, w[i] / scale])

@@ -20,7 +20,7 @@ from .errors import InputError, near_names
 from .expected import expected_stagger
 from .leftover import Leftover, leftovers
 from .ordering import best_order
-from .packing import pack_sets
+from .packing import check_limit, pack_sets
 from .pairwise import parts_of
 from .sweepgrid import TRAVEL_SHARE, SweepGrid, build_grid
 
@@ -362,11 +362,7 @@ def disjoint_sets(
     """
     from .gatebus import solve_bus
 
-    if not 0.0 < limit_octaves < math.inf:
-        raise InputError(
-            f"a stagger limit of {limit_octaves:g} octaves cannot be met: give one above 0, "
-            "such as 0.05 (and see the best set's stagger first)"
-        )
+    check_limit(limit_octaves)
     if not equal_shunts(circuit):
         raise InputError(
             f"{circuit.name} has stages with different shunts; disjoint sets are chosen for equal "

@@ -190,8 +190,10 @@ def octave_slopes(circuit: Circuit, jfets: Sequence[Jfet], gate_v: npt.ArrayLike
     return np.asarray(keep * slopes / total / np.log(2.0))
 
 
-def stopped_stages(slopes: Array, mean_track: Array, swing_v: float) -> npt.NDArray[np.bool_]:
-    """Return which stages have stopped while another still moves, shape (times, stages).
+def stopped_stages(
+    slopes: Array, mean_track: Array, swing_v: npt.ArrayLike
+) -> npt.NDArray[np.bool_]:
+    """Return which stages have stopped while another still moves, shape (..., times, stages).
 
     A stage is stopped where its slope is below a quarter of the largest while that one
     still matters: times the gate's swing it is above a quarter of the mean track's range.
@@ -199,14 +201,15 @@ def stopped_stages(slopes: Array, mean_track: Array, swing_v: float) -> npt.NDAr
     Parameters
     ----------
     slopes : ndarray
-        ``d log2 f_i / d VG``, shape (times, stages) [octaves/V].
+        ``d log2 f_i / d VG``, shape (..., times, stages) [octaves/V].
     mean_track : ndarray
-        Mean over the stages of ``log2 f_i``, shape (times,) [octaves].
-    swing_v : float
-        The gate's swing over the cycle [V].
+        Mean over the stages of ``log2 f_i``, shape (..., times) [octaves].
+    swing_v : array_like
+        The gate's swing over the cycle, shape (...) [V].
     """
-    largest = slopes.max(axis=1, keepdims=True)
-    matters = largest * swing_v > STOPPED_SHARE * np.ptp(mean_track)
+    largest = slopes.max(axis=-1, keepdims=True)
+    swing = np.asarray(swing_v, float)[..., None, None]
+    matters = largest * swing > STOPPED_SHARE * np.ptp(mean_track, axis=-1)[..., None, None]
     return np.asarray((slopes < STOPPED_SHARE * largest) & matters)
 
 

@@ -12,7 +12,7 @@ from collections.abc import Sequence
 import numpy as np
 import numpy.typing as npt
 
-from .chain import break_hz, mix_gains, stage_gains, wet_and_loop
+from .chain import Gains, break_hz, circuit_gains, wet_and_loop
 from .circuit import Circuit
 from .jfet import Jfet
 
@@ -33,7 +33,9 @@ def notch_count(circuit: Circuit) -> int:
     return circuit.stage_count // 2
 
 
-def find_notches(circuit: Circuit, break_frequency_hz: npt.ArrayLike) -> tuple[Array, Array]:
+def find_notches(
+    circuit: Circuit, break_frequency_hz: npt.ArrayLike, gains: Gains | None = None
+) -> tuple[Array, Array]:
     """Return frequency and depth of every notch.
 
     Parameters
@@ -42,6 +44,8 @@ def find_notches(circuit: Circuit, break_frequency_hz: npt.ArrayLike) -> tuple[A
         Gives arms, feedback and mix.
     break_frequency_hz : array_like
         Shape (cases, stages) [Hz].
+    gains : Gains, optional
+        In place of the circuit's own, of one case or of shape (cases, ...).
 
     Returns
     -------
@@ -52,26 +56,27 @@ def find_notches(circuit: Circuit, break_frequency_hz: npt.ArrayLike) -> tuple[A
         Level there [dB], NaN alike.
     """
     breaks = np.asarray(break_frequency_hz, float)
+    own = gains or circuit_gains(circuit)
     octaves = np.arange(np.log2(GRID_LOW_HZ), np.log2(GRID_HIGH_HZ), 1.0 / GRID_PER_OCTAVE)
-    phase = _wet_phase(circuit, breaks, 2.0**octaves)
+    phase = _wet_phase(circuit, own, breaks, 2.0**octaves)
     count = notch_count(circuit)
     # With an odd number of stages the chain inverts at DC: the phase starts pi further on.
     first = 1.0 if circuit.stage_count % 2 == 0 else 2.0
     passing = np.full((len(breaks), count), np.nan)
     for k in range(count):
         passing[:, k] = _first_passing(phase, -(first + 2 * k) * np.pi, octaves)
-    return _nearest_minimum(circuit, breaks, passing)
+    return _nearest_minimum(circuit, own, breaks, passing)
 
 
-def _wet_phase(circuit: Circuit, breaks: Array, freq_hz: Array) -> Array:
+def _wet_phase(circuit: Circuit, gains: Gains, breaks: Array, freq_hz: Array) -> Array:
     """Return the chain's phase without jumps, 0 at DC (its sign left out), (cases, F) [rad]."""
-    b, c = stage_gains(circuit)
+    spread = ((1.0 + gains.c) / gains.b)[..., None]
     phase = np.zeros((len(breaks), len(freq_hz)))
     for i in range(circuit.stage_count):
         ratio = freq_hz / breaks[:, i, None]
-        phase -= np.arctan(ratio) + np.arctan((1.0 + c[i]) / b[i] * ratio)
+        phase -= np.arctan(ratio) + np.arctan(spread[..., i, :] * ratio)
     if circuit.feedback is not None:
-        loop = wet_and_loop(circuit, breaks, 2j * np.pi * freq_hz)[1]
+        loop = wet_and_loop(circuit, breaks, 2j * np.pi * freq_hz, gains)[1]
         phase -= np.unwrap(np.angle(1.0 + loop), axis=1)
     return phase
 
@@ -89,9 +94,12 @@ def _first_passing(phase: Array, target: float, octaves: Array) -> Array:
     return np.where(found, place, np.nan)
 
 
-def _nearest_minimum(circuit: Circuit, breaks: Array, passing: Array) -> tuple[Array, Array]:
+def _nearest_minimum(
+    circuit: Circuit, gains: Gains, breaks: Array, passing: Array
+) -> tuple[Array, Array]:
     """Zoom in on the mixed level's minimum about each passing, (cases, notches)."""
-    d, w = mix_gains(circuit)
+    d = gains.dry[..., None]
+    w = gains.wet[..., None]
     reach = np.full(passing.shape, REACH_OCTAVES)
     gaps = np.diff(passing, axis=1) / 2.0
     if gaps.size:
@@ -105,8 +113,8 @@ def _nearest_minimum(circuit: Circuit, breaks: Array, passing: Array) -> tuple[A
     for zoom in range(ZOOMS):
         place = centre[..., None] + reach[..., None] * span
         flat = place.reshape(len(breaks), -1)
-        wet = wet_and_loop(circuit, breaks, 2j * np.pi * 2.0**flat)[0].reshape(place.shape)
-        power = np.abs(d + w * wet) ** 2
+        wet = wet_and_loop(circuit, breaks, 2j * np.pi * 2.0**flat, gains)[0]
+        power = (np.abs(d + w * wet) ** 2).reshape(place.shape)
         least = power.argmin(axis=-1)
         if zoom == 0:
             # A minimum at the window's edge belongs to another notch, or is none.
@@ -120,7 +128,7 @@ def _nearest_minimum(circuit: Circuit, breaks: Array, passing: Array) -> tuple[A
         centre = place[rows, columns, least] + step * np.clip(shift, -1.0, 1.0)
         reach = 2.0 * step
     hz = 2.0**centre
-    wet = wet_and_loop(circuit, breaks, 2j * np.pi * hz)[0]
+    wet = wet_and_loop(circuit, breaks, 2j * np.pi * hz, gains)[0]
     with np.errstate(divide="ignore"):
         level = 20.0 * np.log10(np.abs(d + w * wet) / (d + w))
     present &= level <= -LEAST_DEPTH_DB

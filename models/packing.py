@@ -24,6 +24,7 @@ import numpy as np
 import numpy.typing as npt
 
 from .closing import Walk
+from .errors import InputError
 from .pairwise import Array, Index
 from .relaxation import count_bound
 from .sweepgrid import TRAVEL_SHARE, SweepGrid
@@ -58,6 +59,7 @@ SEARCHES = (
     _Search(20_000_000, 0.25, 0.15),
     _Search(40_000_000, 0.5, 0.12),
 )
+QUICK = _Search(200_000, 0.6, 0.12)
 
 
 @dataclass(frozen=True)
@@ -91,6 +93,21 @@ class Packing:
     reason: str
     within_limit: int | None
     lonely: Index
+
+
+def check_limit(limit_octaves: float) -> None:
+    """Refuse a stagger limit that no set can meet.
+
+    Raises
+    ------
+    InputError
+        If it is not above 0, or not finite.
+    """
+    if not 0.0 < limit_octaves < math.inf:
+        raise InputError(
+            f"a stagger limit of {limit_octaves:g} octaves cannot be met: give one above 0, "
+            "such as 0.05 (and see the best set's stagger first)"
+        )
 
 
 def pack_sets(grid: SweepGrid, limit_octaves: float, *, listed: int = LISTED_SETS) -> Packing:
@@ -152,7 +169,7 @@ def pack_sets(grid: SweepGrid, limit_octaves: float, *, listed: int = LISTED_SET
     for search in SEARCHES[1:]:
         if chosen.shape[0] < bound - 1:
             chosen = _exchange(fitting, parts, bound, search, chosen)
-    chosen = chosen[_figures(grid, chosen)[0] <= limit_octaves]
+    chosen = chosen[figures_at_own_bias(grid, chosen)[0] <= limit_octaves]
     return _packed(grid, chosen, bound, reason, total if complete else None, ~stands)
 
 
@@ -227,10 +244,14 @@ def _incidence(sets: Index, parts: int) -> Any:
     )
 
 
-def _figures(
+def figures_at_own_bias(
     grid: SweepGrid, sets: Index, reach: int | None = None
 ) -> tuple[Array, Array, Array, Index]:
-    """Return expected stagger, travel, stall, place of sets at own bias; short ones inf stagger."""
+    """Return expected stagger, travel, stall and place of sets at their own bias, each (S,).
+
+    A set whose travel is short of a uniform set's has infinite stagger. `reach` is that of
+    :meth:`SweepGrid.own_bias`.
+    """
     places, travel, stall = grid.own_bias(sets, reach)
     stagger = np.zeros(sets.shape[0])
     for q in np.unique(places):
@@ -256,7 +277,7 @@ def _fitting(grid: SweepGrid, pool: Index, limit_octaves: float) -> Index:
             kept[mixed[order[np.arange(some.size) - first < share]]] = True
         some = np.flatnonzero(kept)
     reach = None if some.size <= EVERYWHERE_SETS else REACH
-    return some[_figures(grid, pool[some], reach)[0] <= limit_octaves]
+    return some[figures_at_own_bias(grid, pool[some], reach)[0] <= limit_octaves]
 
 
 def _exchange(sets: Index, parts: int, wanted: int, search: _Search, so_far: Index) -> Index:
@@ -274,6 +295,11 @@ def _exchange(sets: Index, parts: int, wanted: int, search: _Search, so_far: Ind
         owner, search.steps, search.hot, search.cold, np.array([SEED]), best, wanted,
     )  # fmt: skip
     return sets[np.unique(best[best >= 0])] if size > so_far.shape[0] else so_far
+
+
+def quick_packing(sets: Index, parts: int) -> Index:
+    """Return disjoint ones of these sets, many if not the most, by a short local search."""
+    return _exchange(sets, parts, parts // sets.shape[1], QUICK, sets[:0])
 
 
 def _branch(sets: Index, parts: int) -> tuple[Index, int]:
@@ -304,7 +330,9 @@ def _packed(
 ) -> Packing:
     none = np.zeros(0)
     stagger, travel, stall, place = (
-        _figures(grid, sets) if sets.shape[0] else (none, none, none, none.astype(np.int64))
+        figures_at_own_bias(grid, sets)
+        if sets.shape[0]
+        else (none, none, none, none.astype(np.int64))
     )
     order = np.argsort(stagger, kind="stable")
     return Packing(

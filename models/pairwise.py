@@ -24,7 +24,8 @@ together: that is how common errors cancel. The form is that of JCGM 100:2008,
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -91,6 +92,11 @@ class Parts:
             own=self.own[at],
             common=self.common[at],
         )
+
+    def like(self, jfets: Sequence[Jfet]) -> Parts:
+        """Return the parts as these JFETs are, at another temperature say, equally uncertain."""
+        there = Parts.from_jfets(tuple(jfets))
+        return replace(self, cutoff_v=there.cutoff_v, ln_beta=there.ln_beta, knee_v=there.knee_v)
 
     def covariance(self) -> Array:
         """Return the whole joint covariance, shape (2 P, 2 P), parameters of a part adjacent."""

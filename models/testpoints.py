@@ -9,10 +9,8 @@ from __future__ import annotations
 
 from contextlib import suppress
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
-from pydantic import ValidationError
 
 from .circuit import (
     Circuit,
@@ -20,33 +18,15 @@ from .circuit import (
     RelaxationOscillator,
     TriangleOscillator,
 )
+from .components import Tolerances, bus_components, nudged
 from .errors import InputError
 from .gatebus import bus_conductance_s, held_bus_v, solve_bus, wiper_source
 from .quantity import Setting
 
 DEFAULT_METER_OHM = 10e6
-DEFAULT_RESISTOR_TOLERANCE = 0.01
-DEFAULT_TRACK_TOLERANCE = 0.2
-DEFAULT_SUPPLY_TOLERANCE = 0.02
-ZENER_TOLERANCE = 0.05
 # A tolerance is a limit; rectangular within, and twice the standard deviation is shown
 # (JCGM 100:2008, 4.3.7 and chapter 6; clause numbers from memory).
 EXPANDED = 2.0 / np.sqrt(3.0)
-
-
-@dataclass(frozen=True)
-class Tolerances:
-    """Limits of the values, as shares of them.
-
-    Parameters
-    ----------
-    resistor, track, supply : float
-        Of fixed resistors, of the trimmer's track and of the supply voltage, 0 to 0.5.
-    """
-
-    resistor: float = DEFAULT_RESISTOR_TOLERANCE
-    track: float = DEFAULT_TRACK_TOLERANCE
-    supply: float = DEFAULT_SUPPLY_TOLERANCE
 
 
 @dataclass(frozen=True)
@@ -171,52 +151,21 @@ def _spreads(
     """Return each point's expanded uncertainty by linear propagation [V]."""
     centre = _true_values(circuit, trimmer, rate)
     sums = dict.fromkeys(centre, 0.0)
-    for field, share in _toleranced(circuit, limits):
+    for part in bus_components(circuit):
+        share = limits.of(part.kind)
         ends = []
-        for sign in (-1.0, 1.0):
-            changed = {field: _field(circuit, field) * (1.0 + sign * share)}
-            # A value beyond what a circuit may be, or at which it stops oscillating, has no
+        for changed in nudged(circuit, part, share):
+            # Beyond what a circuit may be, or where it stops oscillating, there are no
             # voltages: the slope towards the other side then serves for both.
-            with suppress(ValidationError, InputError):
-                ends.append(_true_values(circuit.with_changes(**changed), trimmer, rate))
+            with suppress(InputError):
+                if changed is not None:
+                    ends.append(_true_values(changed, trimmer, rate))
         for name, true_v in centre.items():
             if len(ends) == 2:
                 sums[name] += (0.5 * (ends[1][name] - ends[0][name])) ** 2
             elif ends:
                 sums[name] += (ends[0][name] - true_v) ** 2
     return {name: float(EXPANDED * np.sqrt(total)) for name, total in sums.items()}
-
-
-def _toleranced(circuit: Circuit, limits: Tolerances) -> list[tuple[str, float]]:
-    """Return the values that move the points, by field path, with their limits."""
-    fields = [
-        ("supply__voltage_v", limits.supply),
-        ("bus__bias_ohm", limits.resistor),
-        ("bus__sweep_ohm", limits.resistor),
-        ("bus__trimmer__track_ohm", limits.track),
-        ("bus__trimmer__top_ohm", limits.resistor),
-        ("bus__trimmer__bottom_ohm", limits.resistor),
-    ]
-    if isinstance(circuit.supply.reference, DividerReference):
-        fields += [
-            ("supply__reference__upper_ohm", limits.resistor),
-            ("supply__reference__lower_ohm", limits.resistor),
-        ]
-    else:
-        fields.append(("supply__reference__zener_v", ZENER_TOLERANCE))
-    if isinstance(circuit.oscillator, RelaxationOscillator | TriangleOscillator):
-        fields += [
-            ("oscillator__threshold_in_ohm", limits.resistor),
-            ("oscillator__threshold_out_ohm", limits.resistor),
-        ]
-    return [(field, share) for field, share in fields if _field(circuit, field) != 0.0]
-
-
-def _field(circuit: Circuit, path: str) -> float:
-    value: Any = circuit
-    for name in path.split("__"):
-        value = getattr(value, name)
-    return float(value)
 
 
 def how_to_hold(circuit: Circuit) -> list[str]:

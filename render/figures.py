@@ -14,8 +14,10 @@ import numpy as np
 
 from ..models.atomic import atomic_path
 from ..models.cycle import Cycle
+from ..models.drift import DriftPoint
 from ..models.errors import InputError
 from ..models.estimate import ResistanceBand
+from ..models.variation import Variation
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -167,3 +169,77 @@ def draw_breaks(axes: Axes, cycle: Cycle, labels: Sequence[str]) -> None:
         axes.plot(cycle.time_s[stopped], track[stopped], ls="", marker="x", ms=4, color=ink)
     if cycle.stopped.any():
         axes.plot([], [], ls="", marker="x", ms=4, color="#333333", label="stopped")
+
+
+def variation_figure(
+    variation: Variation, by_celsius: Sequence[DriftPoint], by_supply: Sequence[DriftPoint]
+) -> Figure:
+    """Return how units built from a set stray, and what temperature and supply do.
+
+    Parameters
+    ----------
+    variation : Variation
+        The units.
+    by_celsius, by_supply : sequence of DriftPoint
+        The set over channel temperature and over supply voltage.
+    """
+    figure, first = _new_figure(9.0, 6.4)
+    first.remove()
+    (stagger, alone), (warm, weak) = figure.subplots(2, 2)
+    _draw_stagger(stagger, variation)
+    _draw_alone(alone, variation)
+    _draw_drift(warm, by_celsius, "channel temperature [C]")
+    _draw_drift(weak, by_supply, "supply [V]")
+    return figure
+
+
+def _draw_stagger(axes: Axes, variation: Variation) -> None:
+    axes.hist(
+        variation.draws["stagger_octaves"], bins=40, color="#c8d3dc", edgecolor=INKS[0], lw=0.6
+    )
+    for value, dash, name in (
+        (variation.spreads["stagger_octaves"].nominal, "-", "as printed"),
+        (variation.as_built_octaves, "--", "expected, as built"),
+        (variation.identical_octaves, ":", "expected, identical parts"),
+    ):
+        axes.axvline(value, color="black", ls=dash, lw=1.6, label=name)
+    axes.set_xlim(left=0.0)
+    axes.margins(y=0.25)
+    axes.set_xlabel("stagger [octave]")
+    axes.set_ylabel("units")
+    axes.set_title("Units built from this set", fontsize=10)
+    axes.legend(frameon=False, fontsize=8)
+
+
+def _draw_alone(axes: Axes, variation: Variation) -> None:
+    names = [*variation.alone_octaves, "mismatch of this set"]
+    values = [*variation.alone_octaves.values(), variation.spreads["stagger_octaves"].nominal]
+    places = np.arange(len(names))[::-1]
+    bars = axes.barh(places, values, color="#c8d3dc", edgecolor=INKS[0], lw=0.8, height=0.6)
+    axes.bar_label(bars, fmt="%.3f", padding=3, fontsize=8)
+    axes.set_yticks(places, names, fontsize=8)
+    axes.set_xlim(0.0, 1.25 * max([*values, 1e-3]))
+    axes.set_xlabel("expected stagger from this alone [octave]")
+    axes.set_title("What moves the stages apart", fontsize=10)
+
+
+def _draw_drift(axes: Axes, points: Sequence[DriftPoint], label: str) -> None:
+    values = [point.value for point in points]
+    axes.plot(
+        values, [point.moved_octaves for point in points], color=INKS[0], marker="o", ms=3,
+        label="sweep moved by [octaves]",
+    )  # fmt: skip
+    axes.plot(
+        values, [point.travel_octaves for point in points], color=INKS[1], ls=DASHES[1], marker="s",
+        ms=3, label="travel [octaves]",
+    )  # fmt: skip
+    axes.plot(
+        values, [10.0 * point.stall for point in points], color=INKS[2], ls=DASHES[2], marker="x",
+        ms=4, label="stall [tenths of the time]",
+    )  # fmt: skip
+    axes.axhline(0.0, color="#999999", lw=0.8)
+    axes.margins(y=0.3)  # room for the legend above the lines
+    axes.set_ylim(bottom=min(-0.5, axes.get_ylim()[0] * 0.4))
+    axes.set_xlabel(label)
+    axes.grid(True, color="#dddddd", lw=0.6)
+    axes.legend(frameon=False, fontsize=8, loc="upper center", ncols=2)

@@ -18,7 +18,19 @@ from typing import IO, Any, NoReturn
 
 from ...models.errors import InputError, near_names
 
-COMMANDS = ("demo", "log", "curve", "sort", "trim", "sheet", "render", "audition", "netlist")
+COMMANDS = (
+    "demo",
+    "log",
+    "curve",
+    "sort",
+    "trim",
+    "vary",
+    "stock",
+    "sheet",
+    "render",
+    "audition",
+    "netlist",
+)
 
 EXIT_FAILED = 1
 EXIT_INPUT = 2

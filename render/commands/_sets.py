@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from ...models.circuit import Circuit
     from ...models.estimate import TrayEstimate
     from ...models.jfet import Jfet
+    from ...models.pairwise import Parts
     from ...models.tray import Tray
 
 SYNTAX = (
@@ -86,6 +87,26 @@ def read_set(text: str, args: argparse.Namespace, circuit: Circuit) -> tuple[Jfe
     """Return one set; see :func:`read_sets`."""
     [jfets] = read_sets([text], args, circuit)
     return jfets
+
+
+def read_set_with_errors(
+    text: str, args: argparse.Namespace, circuit: Circuit
+) -> tuple[tuple[Jfet, ...], Parts]:
+    """Return one set and what its readings leave uncertain; see :func:`read_sets`.
+
+    Parts written as parameters are taken as known exactly.
+    """
+    from ...models.pairwise import Parts, parts_of
+
+    if args.tray is None:
+        jfets = read_set(text, args, circuit)
+        return jfets, Parts.from_jfets(jfets)
+    from ...models.estimate import estimate_tray
+
+    tray = read_tray(args)
+    estimate = estimate_tray(tray)
+    jfets = _read_set(text, circuit, tray, estimate)
+    return jfets, parts_of(estimate, [jfet.label for jfet in jfets])
 
 
 def _read_set(

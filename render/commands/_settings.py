@@ -142,6 +142,44 @@ def quantity(
     return value
 
 
+def octaves(written: str, option: str) -> float:
+    """Return a stagger limit [octaves]; the models say what limits can be met.
+
+    Raises
+    ------
+    InputError
+        If it is no number; names the option.
+    """
+    try:
+        return float(written)
+    except ValueError:
+        raise InputError(
+            f"{option} {written!r}: not a number; give octaves of stagger, for example 0.1"
+        ) from None
+
+
+def span(text: str, unit: str, option: str, within: tuple[float, float]) -> tuple[float, float]:
+    """Return the two ends of a written range such as ``10:40``, in SI units.
+
+    Raises
+    ------
+    InputError
+        If it is none, runs backwards or leaves the bounds; names the option.
+    """
+    from ...models.quantity import format_quantity
+
+    low, colon, high = text.partition(":")
+    if not colon:
+        raise InputError(f"{option} {text!r}: expected two ends with a colon between, LOW:HIGH")
+    ends = quantity(low, unit, option), quantity(high, unit, option)
+    if not within[0] <= ends[0] < ends[1] <= within[1]:
+        raise InputError(
+            f"{option} {text!r}: expected the lower end first, both from "
+            f"{format_quantity(within[0], unit)} to {format_quantity(within[1], unit)}"
+        )
+    return ends
+
+
 def setting(parse: Callable[[str], Setting], text: str, option: str) -> Setting:
     """Return a knob's or trimmer's setting.
 

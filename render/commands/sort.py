@@ -64,7 +64,7 @@ def run(args: argparse.Namespace) -> int:
     circuit = load_circuit(args.circuit)
     rate = _settings.setting(parse_rate, args.rate, "--rate")
     tray = read_tray(args)
-    limit = _octaves(args.limit) if args.limit is not None else None
+    limit = _settings.octaves(args.limit, "--limit") if args.limit is not None else None
     fixed = _fixed_stages(args.fixed, circuit, tray) if args.fixed is not None else {}
     if args.type and "?" not in fixed.values():
         raise InputError("--type says what a part given as ? in --fixed is; there is none")
@@ -97,15 +97,6 @@ def run(args: argparse.Namespace) -> int:
         rows = [(one["part"], one["reason"]) for one in record["spares"]]
         print_table("left over", ("part", "why"), rows)
     return 0
-
-
-def _octaves(written: str) -> float:
-    try:
-        return float(written)
-    except ValueError:
-        raise InputError(
-            f"--limit {written!r}: not a number; give octaves of stagger, for example 0.1"
-        ) from None
 
 
 def _fixed_stages(written: str, circuit: Circuit, tray: Tray) -> dict[int, str]:

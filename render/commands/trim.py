@@ -41,10 +41,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     """Solve the bias and print it."""
     from ...models.circuit import load_circuit
+    from ...models.components import Tolerances
     from ...models.cycle import analyse_cycle
     from ...models.quantity import parse_rate, parse_trim
     from ...models.sweepadvice import advise_sweep
-    from ...models.testpoints import Tolerances, how_to_hold, measure_points
+    from ...models.testpoints import how_to_hold, measure_points
     from ..setup import TakeSettings, set_up
     from ._figures import bias_record, bias_rows
     from ._screen import print_json, print_table, progress, say, warn

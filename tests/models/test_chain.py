@@ -12,9 +12,9 @@ from hypothesis import strategies as st
 from scipy.signal import StateSpace, freqresp
 from sweepset.models.chain import (
     break_hz,
+    circuit_gains,
     loop_gain,
     loop_poles_rad,
-    mix_gains,
     unit_response,
     wet_response,
 )
@@ -86,7 +86,8 @@ def test_unequal_mix_fills_the_notch(percent, floor_db):
     # d14: 20 log10 |d - w|/(d + w), with w = (1 + p) d; exact algebra
     share = 1 + percent / 100
     circuit = plain(4).with_changes(mix__dry_ohm=10e3 * share, mix__wet_ohm=10e3)
-    dry, wet = mix_gains(circuit)
+    gains = circuit_gains(circuit)
+    dry, wet = gains.dry, gains.wet
     at = 1000.0 * np.tan(np.pi / 8)
     response = wet_response(circuit, [1e3] * 4, [at])
     level = 20 * np.log10(np.abs(dry + wet * response[0]) / (dry + wet))

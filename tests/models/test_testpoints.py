@@ -3,9 +3,10 @@
 import numpy as np
 import pytest
 from sweepset.models.circuit import load_circuit, shipped_circuits
+from sweepset.models.components import Tolerances
 from sweepset.models.gatebus import solve_bus
 from sweepset.models.quantity import parse_rate
-from sweepset.models.testpoints import Tolerances, how_to_hold, measure_points
+from sweepset.models.testpoints import how_to_hold, measure_points
 
 NOON = parse_rate("noon")
 
@@ -96,7 +97,7 @@ def test_spread_agrees_with_monte_carlo():
 
 def test_ideal_parts_have_no_spread_but_the_zeners():
     circuit = load_circuit("heron")
-    points = measure_points(circuit, 0.4, NOON, tolerances=Tolerances(0.0, 0.0, 0.0))
+    points = measure_points(circuit, 0.4, NOON, tolerances=Tolerances(0.0, 0.0, 0.0, 0.0))
     assert named(points)["supply"].spread_v == 0.0
     # 5 % rectangular: 2 x 0.05 x 5.1 V/sqrt(3)
     assert named(points)["reference rail"].spread_v == pytest.approx(0.2944, abs=1e-3)
