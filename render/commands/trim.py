@@ -36,6 +36,13 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="also find the nearest E24 sweep resistor that brings stall within this",
     )
     _settings.add_json_argument(parser)
+    parser.add_argument("--csv", metavar="FILE", help="also write the test points as a spreadsheet")
+    parser.add_argument(
+        "--plot",
+        metavar="FILE",
+        help="also draw notches and break frequencies (.png or .svg)",
+    )
+    parser.add_argument("--overwrite", action="store_true", help="replace existing files")
 
 
 def run(args: argparse.Namespace) -> int:
@@ -46,11 +53,19 @@ def run(args: argparse.Namespace) -> int:
     from ...models.quantity import parse_rate, parse_trim
     from ...models.sweepadvice import advise_sweep
     from ...models.testpoints import how_to_hold, measure_points
+    from ..figures import cycle_figure, figure_format, save_figure
     from ..setup import TakeSettings, set_up
     from ._figures import bias_record, bias_rows
+    from ._files import new_file, write_new
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import read_set
+    from ._spreadsheet import csv_text
 
+    for made in (args.plot, args.csv):
+        if made is not None:
+            new_file(made, [args.tray, args.fixture, args.circuit], overwrite=args.overwrite)
+    if args.plot is not None:
+        figure_format(args.plot)
     circuit = load_circuit(args.circuit)
     settings = TakeSettings(
         circuit=circuit,
@@ -102,6 +117,10 @@ def run(args: argparse.Namespace) -> int:
                 limit,
                 tell and (lambda share: tell("trying sweep resistors", share)),
             )
+    if args.plot is not None:
+        save_figure(cycle_figure(cycle, settings.labels), args.plot)
+    if args.csv is not None:
+        write_new(args.csv, csv_text(_meter.point_records(points)))
     if args.json:
         record |= {"test_points": _meter.point_records(points), "hold": hold}
         if advice is not None:
@@ -115,4 +134,7 @@ def run(args: argparse.Namespace) -> int:
     if advice is not None:
         print_table("", _meter.SWEEP_COLUMNS, _meter.sweep_rows(advice))
         say(_meter.sweep_sentence(advice))
+    for made in (args.plot, args.csv):
+        if made is not None:
+            say(made)
     return 0

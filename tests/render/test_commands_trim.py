@@ -48,3 +48,16 @@ def test_wrong_values_are_refused(capsys, option, value, said):
     assert said in captured.err
     assert "Traceback" not in captured.err
     assert captured.out == ""
+
+
+def test_spreadsheet_and_picture(tmp_path, capsys):
+    table, plot = tmp_path / "points.csv", tmp_path / "cycle.png"
+    asked = ["trim", PARTS, "--csv", str(table), "--plot", str(plot)]
+    assert main(asked) == 0
+    assert "cycle.png" in capsys.readouterr().out
+    head, first = table.read_text().splitlines()[:2]
+    assert head.startswith("name,true_v")
+    assert first.startswith("supply,9,")
+    assert plot.read_bytes().startswith(b"\x89PNG")
+    assert main(asked) == 2
+    assert "exists already" in capsys.readouterr().err
