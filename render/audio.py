@@ -13,6 +13,7 @@ differ; the stamp is set to zero.
 from __future__ import annotations
 
 import hashlib
+import io
 import json
 import os
 import re
@@ -479,6 +480,38 @@ class AudioWriter:
             f"{self.name}: cannot be written ({_reason(fault)}); it needs {size / 1e6:.1f} MB: "
             "see whether the disk is full and the folder may be written to"
         )
+
+
+def flac_bytes(path: str | Path, start_frame: int, stop_frame: int) -> bytes:
+    """Return a stretch of an audio file as 24-bit FLAC.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    start_frame, stop_frame : int
+        The stretch, within the file.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read.
+    """
+    stream = io.BytesIO()
+    with AudioReader(path) as reader:
+        channels, rate = reader.channels, reader.sample_rate_hz
+        with soundfile.SoundFile(
+            stream, "w", rate, channels, subtype="PCM_24", format="FLAC"
+        ) as packed:
+            done = 0
+            for block in reader.blocks():
+                part = block[max(start_frame - done, 0) : max(stop_frame - done, 0)]
+                if len(part):
+                    packed.write(quantise_24(part)[0])
+                done += len(block)
+                if done >= stop_frame:
+                    break
+    return stream.getvalue()
 
 
 def quantise_24(block: Samples) -> tuple[npt.NDArray[np.int32], int]:

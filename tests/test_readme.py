@@ -96,7 +96,8 @@ def test_demo_writes_what_the_readme_says(tmp_path):
     folder = tmp_path / "sweepset-demo"
     assert "writes seven takes into `sweepset-demo`" in PROSE
     assert len([path for path in folder.glob("*.wav") if "riff_" in path.name]) == 7
-    assert "Open `summary.txt` there first" in PROSE
+    assert "Open `listen.html` there in a browser" in PROSE
+    assert (folder / "listen.html").stat().st_size > 1e6
     assert (folder / "summary.txt").is_file()
 
 

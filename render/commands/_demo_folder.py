@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 from ...models.atomic import atomic_path, check_target, write_text_atomically
 from ...models.errors import InputError
+from ._page import PAGE_NAME
 
 if TYPE_CHECKING:
     from ..audition import Audition
@@ -70,7 +71,7 @@ class DemoFolder:
             )
         if self.path.is_dir():
             check_target(self.path / MANIFEST)
-        names = ["summary.txt", MANIFEST, *takes]
+        names = ["summary.txt", PAGE_NAME, MANIFEST, *takes]
         names += [str(Path(name).with_suffix(".json")) for name in takes]
         self._refuse(name for name in names if not self._may_replace(name))
 

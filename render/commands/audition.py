@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 
 from . import _settings
+from ._page import PAGE_NAME
 from ._sets import SYNTAX, add_tray_arguments
 
 HELP = "render a riff dry and through several sets at several rates, equally loud"
@@ -16,7 +17,8 @@ examples:
 
 All takes start at the same oscillator phase, are brought to one loudness (ITU-R
 BS.1770) and lowered together if one would clip. With --trim auto each set's trimmer is
-solved at the middle one of the rates and stays there for the others.
+solved at the middle one of the rates and stays there for the others. Open listen.html in a
+browser: it plays the takes in step, shows what their notches do, and holds a blind trial.
 """
 
 
@@ -45,15 +47,28 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     _settings.add_trim_argument(parser)
     _settings.add_celsius_argument(parser)
     _settings.add_take_arguments(parser)
+    parser.add_argument(
+        "--no-page", action="store_true", help=f"do not write the listening page {PAGE_NAME}"
+    )
+    parser.add_argument(
+        "--excerpt",
+        metavar="FROM:TO",
+        help="seconds of the riff that the page holds (default: all of it, where it fits)",
+    )
     _settings.add_json_argument(parser)
 
 
 def run(args: argparse.Namespace) -> int:
     """Render the audition and say what was written."""
+    from pathlib import Path
+
     from ...models.circuit import load_circuit
+    from ...models.errors import InputError
     from ...models.quantity import parse_rate, parse_trim
     from ..audition import audition_takes, render_audition
     from ..setup import TakeSettings
+    from ._files import new_file
+    from ._page import page_of, write_page
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import named_sets, read_sets
 
@@ -73,6 +88,14 @@ def run(args: argparse.Namespace) -> int:
         full_scale_v=_settings.quantity(args.full_scale, "V", "--full-scale"),
     )
     takes = audition_takes(base, sets, rates)
+    page = Path(args.out) / PAGE_NAME
+    excerpt = None
+    if args.excerpt is not None:
+        if args.no_page:
+            raise InputError("--excerpt is the listening page's; leave it or --no-page out")
+        excerpt = _settings.span(args.excerpt, "s", "--excerpt", (0.0, 86_400.0))
+    if not args.no_page and page.parent.is_dir():
+        new_file(str(page), [args.riff], overwrite=args.overwrite)
     with progress() as tell:
         made = render_audition(
             args.riff,
@@ -82,9 +105,18 @@ def run(args: argparse.Namespace) -> int:
             overwrite=args.overwrite,
             progress=tell,
         )
+        notice = ""
+        if not args.no_page:
+            if tell:
+                tell("listening page", 1.0)
+            data = page_of(made, Path(args.riff).name, excerpt_s=excerpt)
+            write_page(data, page)
+            notice = data.notice
     warn([text for take in made.takes for text in take.warnings])
     if args.json:
-        print_json({"folder": args.out} | made.as_record())
+        print_json(
+            {"folder": args.out, "page": None if args.no_page else page.name} | made.as_record()
+        )
         return 0
     rows = []
     for name, take, setup in zip(made.names, made.takes, made.setups, strict=True):
@@ -102,4 +134,6 @@ def run(args: argparse.Namespace) -> int:
     columns = ("file", "take", "rate", "trimmer", "LUFS", "peak dBFS")
     print_table("", columns, rows)
     say(f"full scale is {base.full_scale_v:g} V; the takes are in {args.out}")
+    if not args.no_page:
+        say(f"open {page} in a browser ({page.stat().st_size / 1e6:.1f} MB). {notice}".rstrip())
     return 0

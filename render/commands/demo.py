@@ -63,8 +63,10 @@ def run(args: argparse.Namespace) -> int:
     from ...models.tray import find_fixture, load_tray
     from ..audio import check_audio
     from ..audition import AuditionTake, file_names, render_audition
+    from ..page.write import listening_page
     from ._demo_folder import DemoFolder
     from ._demo_summary import summary_text
+    from ._page import PAGE_NAME, page_of
     from ._screen import progress, say, warn
 
     folder = DemoFolder(Path(args.out))
@@ -100,10 +102,14 @@ def run(args: argparse.Namespace) -> int:
                 cycle = analyse_cycle(setup.circuit, setup.jfets, setup.bus)
                 cycles[name.split()[0]].append((setup.settings.rate.text, setup.bus, cycle))
         seconds = check_audio(riff).duration_s
+        if tell:
+            tell("listening page", 1.0)
+        page = listening_page(page_of(made, riff.name))
         folder.finish(
             made,
             texts={
                 "summary.txt": summary_text(tray, circuit, sets, cycles, made, seconds),
+                PAGE_NAME: page,
                 f"circuit_{DEFAULT_CIRCUIT}.toml": shipped_circuits()[DEFAULT_CIRCUIT](),
             },
             copies=[tray.path, find_fixture(tray.path), riff],
@@ -118,6 +124,7 @@ def run(args: argparse.Namespace) -> int:
     for take in made.takes:
         say(f"  {take.path.name}")
     say("  summary.txt (read this first)")
+    say(f"  {PAGE_NAME} (open it in a browser: all takes in step, and a blind trial)")
     return 0
 
 
