@@ -104,6 +104,11 @@ class Cycle:
     margin: float
     stable: bool
 
+    @property
+    def period_s(self) -> float:
+        """The oscillator's period [s]."""
+        return float(self.time_s[1]) * len(self.time_s)
+
 
 def analyse_cycle(circuit: Circuit, jfets: Sequence[Jfet], bus: Bus, points: int = POINTS) -> Cycle:
     """Return what a set does over one cycle.

@@ -49,7 +49,8 @@ def figure_format(path: str | Path) -> str:
     return ending
 
 
-def _new_figure(width: float, height: float) -> tuple[Figure, Any]:
+def new_figure(width: float, height: float) -> tuple[Figure, Any]:
+    """Return a figure of so many inches and its axes."""
     from matplotlib import rcParams
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
@@ -93,7 +94,7 @@ def resistance_figure(
     window_name : str
         What the window belongs to.
     """
-    figure, axes = _new_figure(8.0, 5.2)
+    figure, axes = new_figure(8.0, 5.2)
     named = len(bands) <= NAMED_PARTS
     for number, (label, band) in enumerate(bands):
         ink = INKS[number % len(INKS)] if named else "#333333"
@@ -138,7 +139,7 @@ def cycle_figure(cycle: Cycle, labels: Sequence[str]) -> Figure:
         The parts in stage order.
     """
     # Many stages leave a low strip of a page: a wide picture fills it.
-    figure, axes = _new_figure(8.0 if len(labels) <= MANY_STAGES else 12.0, 4.2)
+    figure, axes = new_figure(8.0 if len(labels) <= MANY_STAGES else 12.0, 4.2)
     draw_breaks(axes, cycle, labels)
     draw_notches(axes, cycle)
     axes.set_yscale("log")
@@ -183,7 +184,7 @@ def variation_figure(
     by_celsius, by_supply : sequence of DriftPoint
         The set over channel temperature and over supply voltage.
     """
-    figure, first = _new_figure(9.0, 6.4)
+    figure, first = new_figure(9.0, 6.4)
     first.remove()
     (stagger, alone), (warm, weak) = figure.subplots(2, 2)
     _draw_stagger(stagger, variation)

@@ -51,6 +51,17 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--no-page", action="store_true", help=f"do not write the listening page {PAGE_NAME}"
     )
     parser.add_argument(
+        "--no-joined",
+        action="store_true",
+        help="do not write joined.wav, in which the first two sets take turns",
+    )
+    parser.add_argument(
+        "--pictures",
+        choices=("png", "svg", "none"),
+        default="png",
+        help="format of the pictures beside the takes (default: png)",
+    )
+    parser.add_argument(
         "--excerpt",
         metavar="FROM:TO",
         help="seconds of the riff that the page holds (default: all of it, where it fits)",
@@ -63,12 +74,10 @@ def run(args: argparse.Namespace) -> int:
     from pathlib import Path
 
     from ...models.circuit import load_circuit
-    from ...models.errors import InputError
     from ...models.quantity import parse_rate, parse_trim
     from ..audition import audition_takes, render_audition
     from ..setup import TakeSettings
-    from ._files import new_file
-    from ._page import page_of, write_page
+    from ._beside import Beside
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import named_sets, read_sets
 
@@ -88,14 +97,15 @@ def run(args: argparse.Namespace) -> int:
         full_scale_v=_settings.quantity(args.full_scale, "V", "--full-scale"),
     )
     takes = audition_takes(base, sets, rates)
-    page = Path(args.out) / PAGE_NAME
-    excerpt = None
-    if args.excerpt is not None:
-        if args.no_page:
-            raise InputError("--excerpt is the listening page's; leave it or --no-page out")
-        excerpt = _settings.span(args.excerpt, "s", "--excerpt", (0.0, 86_400.0))
-    if not args.no_page and page.parent.is_dir():
-        new_file(str(page), [args.riff], overwrite=args.overwrite)
+    beside = Beside(
+        folder=Path(args.out),
+        riff=Path(args.riff),
+        page=not args.no_page,
+        excerpt_s=_excerpt(args),
+        pictures=args.pictures,
+        joined=not args.no_joined,
+    )
+    beside.check(takes, overwrite=args.overwrite)
     with progress() as tell:
         made = render_audition(
             args.riff,
@@ -105,17 +115,12 @@ def run(args: argparse.Namespace) -> int:
             overwrite=args.overwrite,
             progress=tell,
         )
-        notice = ""
-        if not args.no_page:
-            if tell:
-                tell("listening page", 1.0)
-            data = page_of(made, Path(args.riff).name, excerpt_s=excerpt)
-            write_page(data, page)
-            notice = data.notice
+        pairs, written, notice = beside.write(made, tell)
     warn([text for take in made.takes for text in take.warnings])
     if args.json:
         print_json(
-            {"folder": args.out, "page": None if args.no_page else page.name} | made.as_record()
+            {"folder": args.out, "beside": written, "pairs": [pair.as_record() for pair in pairs]}
+            | made.as_record()
         )
         return 0
     rows = []
@@ -134,6 +139,23 @@ def run(args: argparse.Namespace) -> int:
     columns = ("file", "take", "rate", "trimmer", "LUFS", "peak dBFS")
     print_table("", columns, rows)
     say(f"full scale is {base.full_scale_v:g} V; the takes are in {args.out}")
-    if not args.no_page:
+    for pair in pairs:
+        say(f"{pair.names[0]} against {pair.names[1]}: {pair.sentence}")
+        if pair.difference.moments_s:
+            say(f"  listen at {', '.join(f'{at:.1f} s' for at in pair.difference.moments_s)}")
+    for text in written:
+        say(f"  {text}")
+    if beside.page:
+        page = beside.folder / PAGE_NAME
         say(f"open {page} in a browser ({page.stat().st_size / 1e6:.1f} MB). {notice}".rstrip())
     return 0
+
+
+def _excerpt(args: argparse.Namespace) -> tuple[float, float] | None:
+    from ...models.errors import InputError
+
+    if args.excerpt is None:
+        return None
+    if args.no_page:
+        raise InputError("--excerpt is the listening page's; leave it or --no-page out")
+    return _settings.span(args.excerpt, "s", "--excerpt", (0.0, 86_400.0))

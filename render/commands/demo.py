@@ -63,7 +63,9 @@ def run(args: argparse.Namespace) -> int:
     from ...models.tray import find_fixture, load_tray
     from ..audio import check_audio
     from ..audition import AuditionTake, file_names, render_audition
+    from ..page.data import page_takes
     from ..page.write import listening_page
+    from ..pairs import compare_pairs
     from ._demo_folder import DemoFolder
     from ._demo_summary import summary_text
     from ._page import PAGE_NAME, page_of
@@ -104,7 +106,8 @@ def run(args: argparse.Namespace) -> int:
         seconds = check_audio(riff).duration_s
         if tell:
             tell("listening page", 1.0)
-        page = listening_page(page_of(made, riff.name))
+        pairs = compare_pairs(made, page_takes(made))
+        page = listening_page(page_of(made, riff.name, [pair.as_page_pair() for pair in pairs]))
         folder.finish(
             made,
             texts={

@@ -26,22 +26,6 @@ LEAST_EXCERPT_S = 0.1
 
 
 @dataclass(frozen=True)
-class PageCycle:
-    """One cycle of a take's set.
-
-    Parameters
-    ----------
-    period_s : float
-        Period of the oscillator [s]; time 0 of the take is time 0 of the cycle.
-    cycle : Cycle
-        What the set does.
-    """
-
-    period_s: float
-    cycle: Cycle
-
-
-@dataclass(frozen=True)
 class PageTake:
     """One take on the page.
 
@@ -53,14 +37,14 @@ class PageTake:
         Its WAV.
     facts : tuple of (str, str)
         Figures to stand beside it, name and value.
-    cycle : PageCycle or None
-        None for a dry take.
+    cycle : Cycle or None
+        What its set does over one cycle; None for a dry take.
     """
 
     name: str
     path: Path
     facts: tuple[tuple[str, str], ...]
-    cycle: PageCycle | None
+    cycle: Cycle | None
 
 
 @dataclass(frozen=True)
@@ -169,7 +153,7 @@ def page_data(
     fitting = max(int(limit_bytes / (3 * facts[0].channels * len(takes))), 1)
     start, stop, notice = 0, frames, ""
     if excerpt_s is not None:
-        start, stop = _asked_stretch(excerpt_s, facts[0])
+        start, stop = excerpt_frames(excerpt_s, facts[0])
     elif frames > fitting:
         moments = [moment for pair in pairs for moment in pair.moments_s]
         middle = round(moments[0] * rate) if moments else fitting // 2
@@ -222,7 +206,14 @@ def _check_alike(takes: Sequence[PageTake], facts: Sequence[AudioFacts]) -> None
         raise InputError(faults)
 
 
-def _asked_stretch(excerpt_s: tuple[float, float], facts: AudioFacts) -> tuple[int, int]:
+def excerpt_frames(excerpt_s: tuple[float, float], facts: AudioFacts) -> tuple[int, int]:
+    """Return the frames of an asked stretch.
+
+    Raises
+    ------
+    InputError
+        If it does not lie within the riff.
+    """
     low, high = excerpt_s
     rate = facts.sample_rate_hz
     if not 0.0 <= low < facts.duration_s or high - low < min(LEAST_EXCERPT_S, facts.duration_s):
@@ -254,4 +245,4 @@ def _take(name: str, take: TakeFile, setup: Setup | None) -> PageTake:
         ("stall", f"{100.0 * cycle.stall:.0f} % of the time"),
         *facts,
     ]
-    return PageTake(name, take.path, tuple(facts), PageCycle(setup.bus.period_s, cycle))
+    return PageTake(name, take.path, tuple(facts), cycle)

@@ -5,8 +5,10 @@
   const player = new Player(data.rate, data.seconds);
   const calm = matchMedia("(prefers-reduced-motion: reduce)");
   let buffers = [];
-  let now = data.takes.length > 1 ? 1 : 0;
-  let other = 0;
+  // The first pair that something is said of, else the first two takes.
+  const [pair] = data.pairs;
+  let now = pair ? pair.first : Math.min(1, data.takes.length - 1);
+  let other = pair ? pair.second : 0;
   let loopStart = null;
   let trial = null;
 
@@ -90,17 +92,17 @@
       const line = add(body, "tr");
       add(line, "th", name, { scope: "row" });
       for (const n of columns) {
-        const found = data.takes[n].facts.find(([known]) => known === name);
+        const found = data.takes[n].facts.find(([fact]) => fact === name);
         add(line, "td", found ? found[1] : "");
       }
     }
-    const pair = data.pairs.find((one) => (one.first === now && one.second === other) || (one.first === other && one.second === now));
-    byId("pair").textContent = pair ? pair.sentence : "";
+    const known = data.pairs.find((one) => (one.first === now && one.second === other) || (one.first === other && one.second === now));
+    byId("pair").textContent = known ? known.sentence : "";
     const moments = byId("moments");
     moments.replaceChildren();
-    if (pair && pair.moments.length) {
+    if (known && known.moments.length) {
       add(moments, "span", "Listen at");
-      for (const moment of pair.moments) {
+      for (const moment of known.moments) {
         add(moments, "button", time(moment)).addEventListener("click", () => {
           player.seek(moment - data.start - 1);
           stale = true;
@@ -326,7 +328,7 @@
       }
     });
     byId("trial-first").value = String(now);
-    byId("trial-second").value = String(data.takes.length > 2 ? data.takes.length - 1 : 0);
+    byId("trial-second").value = String(other);
     byId("trial").hidden = data.takes.length < 2;
     byId("seek").max = data.seconds;
     const on = (id, event, act) => byId(id).addEventListener(event, act);

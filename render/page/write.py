@@ -17,8 +17,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from ...models.cycle import Cycle
 from ..audio import flac_bytes
-from .data import PageCycle, PageData
+from .data import PageData
 
 SCRIPTS = ("arithmetic.js", "graph.js", "player.js", "draw.js", "trial.js", "page.js")
 LANGUAGE = "en"
@@ -116,10 +117,9 @@ def _record(data: PageData) -> dict[str, Any]:
     }
 
 
-def _cycle(page: PageCycle) -> dict[str, Any]:
-    cycle = page.cycle
+def _cycle(cycle: Cycle) -> dict[str, Any]:
     return {
-        "period": page.period_s,
+        "period": cycle.period_s,
         "notches": [_numbers(track) for track in cycle.notch_hz.T],
         "breaks": [_numbers(track) for track in cycle.break_hz.T],
         "stopped": ["".join("01"[int(one)] for one in track) for track in cycle.stopped.T],

@@ -11,10 +11,10 @@ import pytest
 import soundfile
 from sweepset.models.bias import solve_bias
 from sweepset.models.circuit import load_circuit
-from sweepset.models.cycle import analyse_cycle
+from sweepset.models.cycle import Cycle, analyse_cycle
 from sweepset.models.jfet import Jfet
 from sweepset.models.quantity import parse_rate
-from sweepset.render.page.data import PageCycle, PageTake, page_data
+from sweepset.render.page.data import PageTake, page_data
 from sweepset.render.page.write import listening_page
 
 RATE = 48_000
@@ -27,11 +27,11 @@ def write_wav(path: Path, samples: np.ndarray, rate: int) -> Path:
 
 
 @pytest.fixture(scope="session")
-def a_cycle() -> PageCycle:
+def a_cycle() -> Cycle:
     circuit = load_circuit("heron")
     parts = [Jfet.from_idss(-2.1 - 0.25 * n, 4.2e-3) for n in range(4)]
     bias = solve_bias(circuit, parts, parse_rate("9:00"))
-    return PageCycle(bias.bus.period_s, analyse_cycle(circuit, parts, bias.bus, 256))
+    return analyse_cycle(circuit, parts, bias.bus, 256)
 
 
 @pytest.fixture(scope="session")

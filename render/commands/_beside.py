@@ -1,0 +1,147 @@
+"""What ``audition`` writes beside its takes: the page, the joined WAV and the pictures."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ._page import PAGE_NAME, page_of, write_page
+
+if TYPE_CHECKING:
+    from ..audition import Audition, AuditionTake
+    from ..pairs import ComparedPair
+
+JOINED_NAME = "joined.wav"
+TRACKS_STEM = "notch_tracks"
+
+
+@dataclass(frozen=True)
+class Beside:
+    """What is asked beside the takes.
+
+    Parameters
+    ----------
+    folder, riff : Path
+        Where to, and of what.
+    page : bool
+        Whether to write the listening page.
+    excerpt_s : (float, float) or None
+        The stretch it holds.
+    pictures : str
+        ``png``, ``svg`` or ``none``.
+    joined : bool
+        Whether to write the joined WAV.
+    """
+
+    folder: Path
+    riff: Path
+    page: bool
+    excerpt_s: tuple[float, float] | None
+    pictures: str
+    joined: bool
+
+    def check(self, takes: Sequence[AuditionTake], *, overwrite: bool) -> None:
+        """Refuse, before anything is rendered, files that may not be replaced.
+
+        Raises
+        ------
+        InputError
+            With every such file.
+        """
+        from ...models.errors import InputError
+        from ..audio import check_audio
+        from ..audition import file_names
+        from ..page.data import excerpt_frames
+        from ._files import new_file
+
+        if self.excerpt_s is not None:
+            excerpt_frames(self.excerpt_s, check_audio(self.riff))
+        if not self.folder.is_dir():
+            return
+        stems = file_names([f"{self.riff.stem} {take.name}" for take in takes])
+        names = [PAGE_NAME] if self.page else []
+        names += [JOINED_NAME] if self.joined else []
+        if self.pictures != "none":
+            names += [f"{TRACKS_STEM}.{self.pictures}"]
+            names += [
+                f"{stem}_{what}.{self.pictures}"
+                for stem, take in zip(stems, takes, strict=True)
+                if not take.settings.dry
+                for what in ("spectrogram", "channels")
+            ]
+        faults: list[str] = []
+        for name in names:
+            try:
+                new_file(str(self.folder / name), [str(self.riff)], overwrite=overwrite)
+            except InputError as fault:
+                faults += fault.messages
+        if faults:
+            raise InputError(faults)
+
+    def write(
+        self, made: Audition, tell: Callable[[str, float], None] | None
+    ) -> tuple[list[ComparedPair], list[str], str]:
+        """Measure the takes and write what is asked.
+
+        Returns
+        -------
+        list of ComparedPair, list of str, str
+            What there is to say of pairs of takes, the files written, and the page's notice.
+        """
+        from ..joined import join_takes, musical_joins
+        from ..page.data import page_takes
+        from ..pairs import compare_pairs
+
+        takes = page_takes(made)
+        pairs = compare_pairs(made, takes, tell and (lambda share: tell("comparing", share)))
+        written, notice = [], ""
+        if self.page:
+            if tell:
+                tell("listening page", 0.9)
+            said = [pair.as_page_pair() for pair in pairs]
+            data = page_of(made, self.riff.name, said, self.excerpt_s)
+            write_page(data, self.folder / PAGE_NAME)
+            written.append(PAGE_NAME)
+            notice = data.notice
+        if self.joined and pairs:
+            first, second = takes[pairs[0].first], takes[pairs[0].second]
+            joins = musical_joins(self.riff)
+            join_takes(first.path, second.path, self.folder / JOINED_NAME, joins)
+            places = ", ".join(f"{join:.2f} s" for join in joins) or "nowhere: the riff is short"
+            written.append(f"{JOINED_NAME}: {first.name} and {second.name} by turns, at {places}")
+        if self.pictures != "none":
+            written += self._draw(made, tell)
+        return pairs, written, notice
+
+    def _draw(self, made: Audition, tell: Callable[[str, float], None] | None) -> list[str]:
+        from ...models.cycle import analyse_cycle
+        from ..figures import save_figure
+        from ..pictures import channels_figure, spectrogram_figure, tracks_figure
+
+        dry = next(
+            (t.path for t, s in zip(made.takes, made.setups, strict=True) if s is None), None
+        )
+        cycles, written = [], []
+        for number, (name, take, setup) in enumerate(
+            zip(made.names, made.takes, made.setups, strict=True)
+        ):
+            if setup is None or setup.bus is None:
+                continue
+            if tell:
+                tell("pictures", number / len(made.takes))
+            cycle = analyse_cycle(setup.circuit, setup.jfets, setup.bus)
+            cycles.append((name, cycle))
+            for what, figure in (
+                ("spectrogram", spectrogram_figure(take.path, dry, cycle)),
+                ("channels", channels_figure(setup.circuit, setup.jfets, cycle)),
+            ):
+                path = take.path.with_name(f"{take.path.stem}_{what}.{self.pictures}")
+                save_figure(figure, path)
+                written.append(path.name)
+        if cycles:
+            path = self.folder / f"{TRACKS_STEM}.{self.pictures}"
+            save_figure(tracks_figure(cycles), path)
+            written.append(path.name)
+        return written

@@ -1,0 +1,70 @@
+"""``audition`` through the program: what it writes beside the takes."""
+
+import json
+
+import numpy as np
+import pytest
+import soundfile
+from sweepset.render.commands import main
+
+RATE = 48_000
+SETS = ["--set", "close=-2.10V/4.2mA,-2.11V/4.2mA", "--set", "wide=-2.10V/4.2mA,-2.70V/6.2mA"]
+ASK = ["--circuit", "wren", *SETS, "--rate", "9:00"]
+
+
+@pytest.fixture
+def riff(tmp_path):
+    samples = np.random.default_rng(2).normal(0.0, 0.05, round(1.2 * RATE))
+    soundfile.write(tmp_path / "riff.wav", samples, RATE, subtype="PCM_24")
+    return str(tmp_path / "riff.wav")
+
+
+def test_page_pictures_and_joined_wav_stand_beside_the_takes(riff, tmp_path, capsys):
+    out = tmp_path / "listen"
+    asked = ["audition", riff, *ASK, "-o", str(out)]
+    assert main([*asked, "--json"]) == 0
+    record = json.loads(capsys.readouterr().out)
+    names = {path.name for path in out.iterdir()}
+    assert {"listen.html", "joined.wav", "notch_tracks.png"} <= names
+    assert {"2_riff_close_9-00_spectrogram.png", "3_riff_wide_9-00_channels.png"} <= names
+    [pair] = record["pairs"]
+    assert (pair["first"], pair["second"]) == ("close 9:00", "wide 9:00")
+    assert pair["level_rms_db"] > 0.1
+    assert pair["notch_most_octaves"] > 0.1
+    before = {path: path.read_bytes() for path in out.iterdir()}
+    assert main(asked) == 2
+    said = capsys.readouterr().err
+    for name in ("listen.html", "joined.wav", "notch_tracks.png"):
+        assert f"{name}: exists already" in said
+    assert {path: path.read_bytes() for path in out.iterdir()} == before
+
+
+def test_nothing_but_takes_where_nothing_else_is_wanted(riff, tmp_path):
+    out = tmp_path / "plain"
+    options = ["--no-page", "--no-joined", "--pictures", "none"]
+    assert main(["audition", riff, *ASK, "-o", str(out), *options]) == 0
+    assert {path.suffix for path in out.iterdir()} == {".wav", ".json"}
+
+
+def test_a_very_short_or_silent_riff_works(tmp_path, capsys):
+    for name, samples in (("short", np.full(round(0.2 * RATE), 0.1)), ("silent", np.zeros(RATE))):
+        soundfile.write(tmp_path / f"{name}.wav", samples, RATE, subtype="PCM_24")
+        out = tmp_path / name
+        asked = ["audition", str(tmp_path / f"{name}.wav"), *ASK, "-o", str(out)]
+        assert main([*asked, "--pictures", "svg"]) == 0
+        assert (out / "listen.html").stat().st_size > 20_000
+        assert "nowhere: the riff is short" in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("options", "said"),
+    [
+        (["--excerpt", "1:2", "--no-page"], "leave it or --no-page out"),
+        (["--excerpt", "later"], "expected two ends"),
+        (["--excerpt", "5:9"], "within the riff's 1.20 s"),
+    ],
+)
+def test_an_excerpt_that_cannot_be_is_named(riff, tmp_path, capsys, options, said):
+    assert main(["audition", riff, *ASK, "-o", str(tmp_path / "x"), *options]) == 2
+    assert said in capsys.readouterr().err
+    assert not (tmp_path / "x").exists()
