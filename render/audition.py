@@ -85,20 +85,24 @@ class Audition:
 
 
 def audition_takes(
-    base: TakeSettings, sets: Mapping[str, Sequence[Jfet]], rates: Sequence[Setting]
+    base: TakeSettings,
+    sets: Mapping[str, Sequence[Jfet]],
+    rates: Sequence[Setting],
+    trimmers: Sequence[Setting] = (),
 ) -> list[AuditionTake]:
-    """Return the riff dry, then each set at each rate.
+    """Return the riff dry, then each set at each trimmer position and rate.
 
     Parameters
     ----------
     base : TakeSettings
-        Circuit, temperature and whatever else all takes share. With its trimmer at
-        ``auto`` each set's own position is solved at the middle one of `rates` and
-        kept for the others.
+        Circuit, temperature and whatever else all takes share.
     sets : mapping of str to sequence of Jfet
         Sets by name, each in stage order.
     rates : sequence of Setting
         Positions of the rate knob.
+    trimmers : sequence of Setting
+        Positions of the bias trimmer; that of `base` if left out. With ``auto`` each
+        set's own position is solved at the middle one of `rates` and kept for the others.
 
     Raises
     ------
@@ -109,13 +113,18 @@ def audition_takes(
         raise InputError("an audition needs at least one set and one rate; give them")
     takes = [AuditionTake("dry", replace(base, dry=True))]
     middle = rates[len(rates) // 2]
+    asked = tuple(trimmers) or (base.trimmer,)
     for name, jfets in sets.items():
-        own = replace(base, jfets=tuple(jfets), rate=middle, dry=False)
-        bias = set_up(own).bias
-        if bias is not None:
-            text = f"{base.trimmer.text}, solved at {middle.text}"
-            own = replace(own, trimmer=Setting(text, bias.position, None))
-        takes += [AuditionTake(f"{name} {rate.text}", replace(own, rate=rate)) for rate in rates]
+        for trimmer in asked:
+            own = replace(base, jfets=tuple(jfets), rate=middle, trimmer=trimmer, dry=False)
+            bias = set_up(own).bias
+            if bias is not None:
+                text = f"{trimmer.text}, solved at {middle.text}"
+                own = replace(own, trimmer=Setting(text, bias.position, None))
+            mark = f" trim {trimmer.text}" if len(asked) > 1 else ""
+            takes += [
+                AuditionTake(f"{name} {rate.text}{mark}", replace(own, rate=rate)) for rate in rates
+            ]
     return takes
 
 

@@ -19,6 +19,7 @@ from ..models.jfet import Jfet
 from ..models.notches import set_conductance_s
 from .audio import AudioReader
 from .figures import DASHES, INKS, draw_notches, new_figure
+from .measures import TakeDifference
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -134,6 +135,35 @@ def channels_figure(circuit: Circuit, jfets: Sequence[Jfet], cycle: Cycle) -> Fi
     bottom.set_xlim(0.0, cycle.period_s)
     bottom.set_xlabel("time in the cycle [s]")
     figure.legend(frameon=False, fontsize=8, loc="outside right upper")
+    return figure
+
+
+def difference_figure(difference: TakeDifference, names: tuple[str, str]) -> Figure:
+    """Return the level difference of two takes per ERB band over time.
+
+    Parameters
+    ----------
+    difference : TakeDifference
+        What was measured.
+    names : (str, str)
+        The takes' names.
+    """
+    figure, axes = new_figure(9.0, 4.6)
+    bands = np.arange(len(difference.centre_hz))
+    reach = max(3.0, float(np.nan_to_num(np.abs(difference.level_db)).max()))
+    shade = axes.imshow(
+        difference.level_db.T, cmap="PuOr", vmin=-reach, vmax=reach, aspect="auto",
+        origin="lower", interpolation="nearest",
+        extent=(0.0, float(difference.time_s[-1] + difference.time_s[0]), -0.5, len(bands) - 0.5),
+    )  # fmt: skip
+    shown = [hz for hz in TICKS_HZ if difference.centre_hz[0] <= hz <= difference.centre_hz[-1]]
+    axes.set_yticks(np.interp(shown, difference.centre_hz, bands), [f"{hz:g}" for hz in shown])
+    for moment in difference.moments_s:
+        axes.axvline(moment, color="black", lw=0.8, ls=DASHES[2])
+    axes.set_xlabel("time [s]; dotted: where to listen")
+    axes.set_ylabel("ERB band, centre [Hz]")
+    axes.set_title(f"Level of {names[0]} less {names[1]}", fontsize=10)
+    figure.colorbar(shade, label="dB", pad=0.02)
     return figure
 
 

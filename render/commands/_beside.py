@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
 JOINED_NAME = "joined.wav"
 TRACKS_STEM = "notch_tracks"
+MOST_DIFFERENCES = 6
 
 
 @dataclass(frozen=True)
@@ -65,6 +66,10 @@ class Beside:
         names += [JOINED_NAME] if self.joined else []
         if self.pictures != "none":
             names += [f"{TRACKS_STEM}.{self.pictures}"]
+            # Which pairs there will be is known only once the takes are set up.
+            names += sorted(
+                path.name for path in self.folder.glob(f"difference_*_*.{self.pictures}")
+            )
             names += [
                 f"{stem}_{what}.{self.pictures}"
                 for stem, take in zip(stems, takes, strict=True)
@@ -79,6 +84,9 @@ class Beside:
                 faults += fault.messages
         if faults:
             raise InputError(faults)
+
+    def _difference_name(self, first: int, second: int) -> str:
+        return f"difference_{first + 1}_{second + 1}.{self.pictures}"
 
     def write(
         self, made: Audition, tell: Callable[[str, float], None] | None
@@ -112,13 +120,18 @@ class Beside:
             places = ", ".join(f"{join:.2f} s" for join in joins) or "nowhere: the riff is short"
             written.append(f"{JOINED_NAME}: {first.name} and {second.name} by turns, at {places}")
         if self.pictures != "none":
-            written += self._draw(made, tell)
+            written += self._draw(made, pairs, tell)
         return pairs, written, notice
 
-    def _draw(self, made: Audition, tell: Callable[[str, float], None] | None) -> list[str]:
+    def _draw(
+        self,
+        made: Audition,
+        pairs: Sequence[ComparedPair],
+        tell: Callable[[str, float], None] | None,
+    ) -> list[str]:
         from ...models.cycle import analyse_cycle
         from ..figures import save_figure
-        from ..pictures import channels_figure, spectrogram_figure, tracks_figure
+        from ..pictures import channels_figure, difference_figure, spectrogram_figure, tracks_figure
 
         dry = next(
             (t.path for t, s in zip(made.takes, made.setups, strict=True) if s is None), None
@@ -143,5 +156,9 @@ class Beside:
         if cycles:
             path = self.folder / f"{TRACKS_STEM}.{self.pictures}"
             save_figure(tracks_figure(cycles), path)
+            written.append(path.name)
+        for pair in pairs[:MOST_DIFFERENCES]:
+            path = self.folder / self._difference_name(pair.first, pair.second)
+            save_figure(difference_figure(pair.difference, pair.names), path)
             written.append(path.name)
         return written

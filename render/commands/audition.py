@@ -44,7 +44,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         action="append",
         help="rate: 9:00, noon, 35%% or 0.8Hz; may be given several times (default: noon)",
     )
-    _settings.add_trim_argument(parser)
+    parser.add_argument(
+        "--trim",
+        action="append",
+        help="bias trimmer: auto (solved for each set), 45%%, or the wiper above ground, 2.31V; "
+        "may be given several times (default: auto)",
+    )
     _settings.add_celsius_argument(parser)
     _settings.add_take_arguments(parser)
     parser.add_argument(
@@ -88,15 +93,19 @@ def run(args: argparse.Namespace) -> int:
         _settings.setting(parse_rate, text, "--rate")
         for text in dict.fromkeys(args.rate or ["noon"])
     ]
+    trimmers = [
+        _settings.setting(parse_trim, text, "--trim")
+        for text in dict.fromkeys(args.trim or ["auto"])
+    ]
     base = TakeSettings(
         circuit=circuit,
         jfets=next(iter(sets.values())),
-        trimmer=_settings.setting(parse_trim, args.trim, "--trim"),
+        trimmer=trimmers[0],
         rate=rates[0],
         celsius=_settings.quantity(args.celsius, "C", "--celsius"),
         full_scale_v=_settings.quantity(args.full_scale, "V", "--full-scale"),
     )
-    takes = audition_takes(base, sets, rates)
+    takes = audition_takes(base, sets, rates, trimmers)
     beside = Beside(
         folder=Path(args.out),
         riff=Path(args.riff),

@@ -27,6 +27,7 @@ def test_page_pictures_and_joined_wav_stand_beside_the_takes(riff, tmp_path, cap
     names = {path.name for path in out.iterdir()}
     assert {"listen.html", "joined.wav", "notch_tracks.png"} <= names
     assert {"2_riff_close_9-00_spectrogram.png", "3_riff_wide_9-00_channels.png"} <= names
+    assert "difference_2_3.png" in names
     [pair] = record["pairs"]
     assert (pair["first"], pair["second"]) == ("close 9:00", "wide 9:00")
     assert pair["level_rms_db"] > 0.1
@@ -44,6 +45,25 @@ def test_nothing_but_takes_where_nothing_else_is_wanted(riff, tmp_path):
     options = ["--no-page", "--no-joined", "--pictures", "none"]
     assert main(["audition", riff, *ASK, "-o", str(out), *options]) == 0
     assert {path.suffix for path in out.iterdir()} == {".wav", ".json"}
+
+
+def test_each_set_at_each_trimmer_position_asked_for(riff, tmp_path, capsys):
+    out = tmp_path / "many"
+    options = ["--no-page", "--no-joined", "--pictures", "none", "--json"]
+    asked = ["audition", riff, *ASK, "--trim", "auto", "--trim", "45%", "-o", str(out), *options]
+    assert main(asked) == 0
+    record = json.loads(capsys.readouterr().out)
+    names = [take["name"] for take in record["takes"]]
+    assert names == [
+        "dry",
+        *(f"{name} 9:00 trim {trim}" for name in ("close", "wide") for trim in ("auto", "45%")),
+    ]
+    positions = {
+        name: json.loads((out / take["file"]).with_suffix(".json").read_text())["take"]["trimmer"]
+        for name, take in zip(names[1:], record["takes"][1:], strict=True)
+    }
+    assert positions["wide 9:00 trim 45%"]["position"] == 0.45
+    assert positions["wide 9:00 trim auto"]["position"] != 0.45
 
 
 def test_a_very_short_or_silent_riff_works(tmp_path, capsys):
