@@ -11,6 +11,7 @@ from __future__ import annotations
 import contextlib
 import errno
 import os
+import re
 import stat
 import tempfile
 from collections.abc import Iterator
@@ -21,6 +22,7 @@ from .errors import InputError
 
 # A temporary name must stay within what file systems allow (255 bytes).
 _MAX_STEM = 40
+_LEFTOVER = re.compile(r"\..{1,40}\.[a-z0-9_]{8}\.part(\.\w+)?")
 
 
 @contextmanager
@@ -72,6 +74,25 @@ def atomic_path(target: str | Path) -> Iterator[Path]:
     # cannot be opened the file is whole all the same.
     with contextlib.suppress(OSError):
         _force_to_disk(target.parent, os.O_RDONLY)
+
+
+def clear_leftovers(folder: str | Path) -> list[Path]:
+    """Remove temporary files that a killed process left in a folder; return what was removed.
+
+    Call it only while no other process of this program writes there.
+
+    Parameters
+    ----------
+    folder : str or Path
+        The folder.
+    """
+    removed = []
+    for path in sorted(Path(folder).iterdir()):
+        if _LEFTOVER.fullmatch(path.name) and path.is_file() and not path.is_symlink():
+            with contextlib.suppress(OSError):
+                path.unlink()
+                removed.append(path)
+    return removed
 
 
 def write_text_atomically(target: str | Path, text: str) -> None:

@@ -151,6 +151,11 @@ class AudioReader:
         return int(self._file.frames)
 
     @property
+    def comment(self) -> str:
+        """The comment in the file's own metadata; empty if there is none."""
+        return str(self._file.comment)
+
+    @property
     def encoding(self) -> str:
         """Container and sample format, as the library names them."""
         return f"{self._file.format} {self._file.subtype}"
@@ -482,7 +487,7 @@ class AudioWriter:
         )
 
 
-def flac_bytes(path: str | Path, start_frame: int, stop_frame: int) -> bytes:
+def flac_bytes(path: str | Path, start_frame: int, stop_frame: int, gain_db: float = 0.0) -> bytes:
     """Return a stretch of an audio file as 24-bit FLAC.
 
     Parameters
@@ -491,6 +496,8 @@ def flac_bytes(path: str | Path, start_frame: int, stop_frame: int) -> bytes:
         The file.
     start_frame, stop_frame : int
         The stretch, within the file.
+    gain_db : float
+        Gain [dB]; what passes full scale is held there.
 
     Raises
     ------
@@ -498,6 +505,7 @@ def flac_bytes(path: str | Path, start_frame: int, stop_frame: int) -> bytes:
         If the file cannot be read.
     """
     stream = io.BytesIO()
+    gain = 10.0 ** (gain_db / 20.0)
     with AudioReader(path) as reader:
         channels, rate = reader.channels, reader.sample_rate_hz
         with soundfile.SoundFile(
@@ -507,7 +515,7 @@ def flac_bytes(path: str | Path, start_frame: int, stop_frame: int) -> bytes:
             for block in reader.blocks():
                 part = block[max(start_frame - done, 0) : max(stop_frame - done, 0)]
                 if len(part):
-                    packed.write(quantise_24(part)[0])
+                    packed.write(quantise_24(part * gain)[0])
                 done += len(block)
                 if done >= stop_frame:
                     break

@@ -238,7 +238,7 @@ def safe_name(text: str) -> str:
         Any text.
     """
     plain = unicodedata.normalize("NFKD", text).encode("ascii", "ignore").decode()
-    plain = plain.replace("%", "pct")
+    plain = plain.replace("%", "pct").replace("+", "plus")
     plain = re.sub(r"[^A-Za-z0-9._-]+", "-", re.sub(r"\s+", "_", plain.strip()))
     plain = plain[:MAX_NAME].strip("-. ") or "take"
     return f"_{plain}" if _RESERVED.match(plain) else plain

@@ -29,6 +29,7 @@ COMMANDS = (
     "sheet",
     "render",
     "audition",
+    "batch",
     "netlist",
 )
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
-from ._spreadsheet import safe_cell
+from ..spreadsheet import safe_cell
 
 if TYPE_CHECKING:
     from ...models.choosing import DisjointSets, SetFigures

@@ -7,18 +7,13 @@ from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 from ...models.errors import InputError
+from ..written_set import parse_set
 
 if TYPE_CHECKING:
     from ...models.circuit import Circuit
-    from ...models.estimate import TrayEstimate
     from ...models.jfet import Jfet
     from ...models.pairwise import Parts
     from ...models.tray import Tray
-
-SYNTAX = (
-    "part labels in stage order (J07,J12,J31,J40) with --tray, or without a tray each part's "
-    "cut-off voltage and Idss (-2.10V/4.2mA,-2.13V/4.3mA)"
-)
 
 
 def add_tray_arguments(parser: argparse.ArgumentParser, *, required: bool = False) -> None:
@@ -75,7 +70,7 @@ def read_sets(
     found: list[tuple[Jfet, ...]] = []
     for text in written:
         try:
-            found.append(_read_set(text, circuit, tray, estimate))
+            found.append(parse_set(text, circuit, tray, estimate))
         except InputError as fault:
             faults += [message for message in fault.messages if message not in faults]
     if faults:
@@ -105,68 +100,8 @@ def read_set_with_errors(
 
     tray = read_tray(args)
     estimate = estimate_tray(tray)
-    jfets = _read_set(text, circuit, tray, estimate)
+    jfets = parse_set(text, circuit, tray, estimate)
     return jfets, parts_of(estimate, [jfet.label for jfet in jfets])
-
-
-def _read_set(
-    text: str, circuit: Circuit, tray: Tray | None, estimate: TrayEstimate | None
-) -> tuple[Jfet, ...]:
-    words = [word.strip() for word in text.split(",")]
-    faults: list[str] = []
-    if not any(words):
-        raise InputError(f"--set {text!r}: no parts; give {SYNTAX}")
-    if "" in words:
-        faults.append(f"--set {text!r}: nothing between two commas; give {SYNTAX}")
-    words = [word for word in words if word]
-    jfets: list[Jfet] = []
-    try:
-        if tray is not None and estimate is not None:
-            # A part marked as used may well sit in the very unit that is to be heard.
-            parts = tray.chosen(words, allow_used=True)
-            jfets = [estimate.jfet(part.label) for part in parts]
-        else:
-            jfets = _written_parts(text, words)
-    except InputError as fault:
-        faults += fault.messages
-    if len(words) != circuit.stage_count:
-        faults.append(
-            f"--set {text!r}: circuit {circuit.name!r} has {circuit.stage_count} stages, the set "
-            f"has {len(words)} parts; give one part per stage, in stage order"
-        )
-    if faults:
-        raise InputError(faults)
-    return tuple(jfets)
-
-
-def _written_parts(text: str, words: Sequence[str]) -> list[Jfet]:
-    """Return parts written as cut-off voltage and Idss."""
-    from ...models.jfet import Jfet
-    from ...models.quantity import parse_quantity
-
-    jfets = []
-    faults = []
-    for word in words:
-        if "/" not in word:
-            faults.append(
-                f"--set {text!r}: {word!r} is a label, but no tray is given; give --tray, or "
-                "write cut-off voltage and Idss, for example -2.10V/4.2mA"
-            )
-            continue
-        cutoff, _, idss = word.partition("/")
-        try:
-            # Datasheets and meters leave the minus sign out as often as not.
-            cutoff_v, idss_a = -abs(parse_quantity(cutoff, "V")), parse_quantity(idss, "A")
-            if not -20.0 <= cutoff_v <= -0.05:
-                raise ValueError(f"cut-off voltage {cutoff_v:g} V; expected -0.05 V to -20 V")
-            if not 1e-6 <= idss_a <= 1.0:
-                raise ValueError(f"Idss {idss_a:g} A; expected 1 uA to 1 A; mind the unit (4.2mA)")
-            jfets.append(Jfet.from_idss(cutoff_v, idss_a))
-        except ValueError as fault:
-            faults.append(f"--set {text!r}: {word!r}: {fault}")
-    if faults:
-        raise InputError(faults)
-    return jfets
 
 
 def named_sets(written: Sequence[str]) -> tuple[list[str], list[str]]:

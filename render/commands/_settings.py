@@ -7,7 +7,8 @@ from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 from ...models.errors import InputError
-from ._sets import SYNTAX, add_tray_arguments
+from ..written_set import SYNTAX
+from ._sets import add_tray_arguments
 
 if TYPE_CHECKING:
     from ...models.quantity import Setting

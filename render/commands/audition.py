@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import argparse
 
+from ..written_set import SYNTAX
 from . import _settings
 from ._page import PAGE_NAME
-from ._sets import SYNTAX, add_tray_arguments
+from ._sets import add_tray_arguments
 
 HELP = "render a riff dry and through several sets at several rates, equally loud"
 EPILOG = """\

@@ -50,9 +50,9 @@ def run(args: argparse.Namespace) -> int:
     from ...models.errors import InputError
     from ...models.estimate import estimate_tray
     from ..figures import figure_format
+    from ..spreadsheet import csv_text
     from ._files import new_file, write_new
     from ._screen import print_json, print_table, say, warn
-    from ._spreadsheet import csv_text
 
     for made in (args.plot, args.csv):
         if made is not None:

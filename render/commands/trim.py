@@ -55,11 +55,11 @@ def run(args: argparse.Namespace) -> int:
     from ...models.testpoints import how_to_hold, measure_points
     from ..figures import cycle_figure, figure_format, save_figure
     from ..setup import TakeSettings, set_up
+    from ..spreadsheet import csv_text
     from ._figures import bias_record, bias_rows
     from ._files import new_file, write_new
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import read_set
-    from ._spreadsheet import csv_text
 
     for made in (args.plot, args.csv):
         if made is not None:

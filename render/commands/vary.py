@@ -75,11 +75,11 @@ def run(args: argparse.Namespace) -> int:
     from ...models.variation import vary_set
     from ..figures import figure_format, save_figure, variation_figure
     from ..setup import TakeSettings, set_up
+    from ..spreadsheet import csv_text
     from . import _variation
     from ._files import new_file, write_new
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import read_set_with_errors
-    from ._spreadsheet import csv_text
 
     for made in (args.plot, args.csv):
         if made is not None:

@@ -39,12 +39,15 @@ class PageTake:
         Figures to stand beside it, name and value.
     cycle : Cycle or None
         What its set does over one cycle; None for a dry take.
+    gain_db : float
+        Gain on the page over that of the WAV [dB].
     """
 
     name: str
     path: Path
     facts: tuple[tuple[str, str], ...]
     cycle: Cycle | None
+    gain_db: float = 0.0
 
 
 @dataclass(frozen=True)

@@ -19,7 +19,7 @@ import numpy.typing as npt
 
 from ...models.cycle import Cycle
 from ..audio import flac_bytes
-from .data import PageData
+from .data import PageData, PageTake
 
 SCRIPTS = ("arithmetic.js", "graph.js", "player.js", "draw.js", "trial.js", "page.js")
 LANGUAGE = "en"
@@ -45,9 +45,7 @@ def listening_page(data: PageData) -> str:
         "base-uri 'none'; form-action 'none'"
     )
     takes = "\n".join(
-        f'<script type="application/octet-stream" id="take-{n}">'
-        f"{base64.b64encode(flac_bytes(take.path, data.start_frame, data.stop_frame)).decode()}"
-        "</script>"
+        f'<script type="application/octet-stream" id="take-{n}">{_packed(take, data)}</script>'
         for n, take in enumerate(data.takes)
     )
     return f"""<!doctype html>
@@ -67,6 +65,11 @@ def listening_page(data: PageData) -> str:
 </body>
 </html>
 """
+
+
+def _packed(take: PageTake, data: PageData) -> str:
+    packed = flac_bytes(take.path, data.start_frame, data.stop_frame, take.gain_db)
+    return base64.b64encode(packed).decode()
 
 
 def embedded_json(record: Any) -> str:

@@ -12,7 +12,7 @@ from pathlib import Path
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
-from sweepset.models.atomic import atomic_path, write_text_atomically
+from sweepset.models.atomic import atomic_path, clear_leftovers, write_text_atomically
 from sweepset.models.errors import InputError
 
 
@@ -163,3 +163,16 @@ def test_fault_of_another_file_passes_unchanged(tmp_path: Path) -> None:
     with pytest.raises(FileNotFoundError):
         read_other()
     assert names(tmp_path) == []
+
+
+def test_leftovers_of_a_killed_process_are_cleared_and_nothing_else(tmp_path):
+    with atomic_path(tmp_path / "take.wav") as temporary:
+        name = temporary.name
+    (tmp_path / "take.wav").unlink()
+    left = tmp_path / name
+    left.write_bytes(b"half")
+    others = [tmp_path / n for n in (".hidden", "take.wav", ".a.part.txt", "x.part.wav")]
+    for other in others:
+        other.write_bytes(b"mine")
+    assert clear_leftovers(tmp_path) == [left]
+    assert all(other.read_bytes() == b"mine" for other in others)

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import pytest
 from sweepset.render.commands import main
-from sweepset.render.commands._spreadsheet import csv_text, safe_cell
+from sweepset.render.spreadsheet import csv_text, safe_cell
 
 SAMPLES = Path(__file__).resolve().parents[2] / "samples"
 
