@@ -185,8 +185,9 @@ class Engine:
         self._workers = workers or os.cpu_count() or 1
         self._up = self._resampler(sample_rate, self.rate_hz)
         self._down = self._resampler(self.rate_hz, sample_rate)
+        # Linear, and far too slow to know one rate from the other: run at the file's rate.
         self._couple_in = HighPass(
-            circuit.input.resistor_ohm * circuit.input.capacitor_f, self.rate_hz, channels
+            circuit.input.resistor_ohm * circuit.input.capacitor_f, sample_rate, channels
         )
         mix = circuit.mix
         both = mix.dry_ohm + mix.wet_ohm
@@ -194,7 +195,7 @@ class Engine:
         self._dry_gain, self._wet_gain = mix.wet_ohm / both, mix.dry_ohm / both
         self._load_gain = mix.load_ohm / (mix.load_ohm + source)
         self._couple_out = HighPass(
-            (mix.load_ohm + source) * mix.capacitor_f, self.rate_hz, channels
+            (mix.load_ohm + source) * mix.capacitor_f, sample_rate, channels
         )
         self._waiting: list[Array] = []
         self._waiting_steps = 0
@@ -223,7 +224,7 @@ class Engine:
         if not self._chain_only:
             clamped = np.clip(block, low, high)
             self._input_rail += int((clamped != block).any(axis=1).sum())
-            block = clamped
+            block = self._couple_in(clamped)
         return self._through(self._resample(self._up, block, last=False), last=False)
 
     def finish(self) -> Array:
@@ -278,6 +279,8 @@ class Engine:
             empty = np.zeros((0, self._channels))
             done.append(self._resample(self._down, empty, last=True))
         out = np.concatenate(done) if done else np.zeros((0, self._channels))
+        if not self._chain_only:
+            out = self._couple_out(out)
         if last:
             out = self._fit(out)
         self._frames_out += len(out)
@@ -293,16 +296,14 @@ class Engine:
 
     def _stretch(self, volts: Array) -> Array:
         """Run one stretch at the oversampled rate, shape (steps, channels)."""
-        coupled = volts if self._chain_only else self._couple_in(volts)
-        wet = self._chain(coupled)
+        wet = self._chain(volts)
         self._done_steps += len(volts)
         if self._chain_only:
             return wet
         wet *= self._load_gain * self._wet_gain
-        coupled *= self._load_gain * self._dry_gain
-        wet += coupled
-        del coupled
-        return self._couple_out(wet)
+        volts *= self._load_gain * self._dry_gain
+        wet += volts
+        return wet
 
     def _chain(self, x: Array) -> Array:
         """Cut a stretch into slices, run them side by side and join them."""
@@ -353,5 +354,7 @@ class HighPass:
 
     def __call__(self, x: Array) -> Array:
         """Return the next stretch, shape (frames, channels)."""
+        if not len(x):  # lfilter would give back a state of whatever lay in memory
+            return x
         y, self._state = lfilter(self._b, self._a, x, axis=0, zi=self._state)
         return np.asarray(y)

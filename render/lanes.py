@@ -1,14 +1,14 @@
 """Filling the sample loops' tables and running them over lanes.
 
-One call runs a bundle of lanes through the nonlinear chain: first the fast loop,
-then, for lanes whose outputs came to a rail or whose steps needed more passes,
-the careful loop over the same input.
+One call runs a bundle of lanes through the nonlinear chain, piece by piece: first the
+fast loop, then, for lanes whose steps needed more passes or whose outputs came to a rail,
+a slower loop over the same piece.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 from itertools import pairwise
 
 import numpy as np
@@ -51,8 +51,10 @@ LEFT_OVER_V = 1e-5
 # The furthest the gate may go while its side of the law is carried on by expansion: the
 # third-order rest, (2 mV/knee)^3/6 of it, is worth less than a microvolt at the drain.
 BUS_STEP_V = 2e-3
-# Frames fed to a loop at a time.
-PIECE = 2048
+# Frames fed to a loop at a time, so that its working set stays in the cache.
+PIECE = 512
+# Pieces for which a lane that needed two passes gets them unasked.
+STICKY = 1
 
 
 @dataclass(frozen=True)
@@ -95,6 +97,32 @@ class Tally:
             self.stuck,
             self.careful_steps,
         )
+
+
+@dataclass
+class _Piece:
+    """Some frames of all lanes, and the state they start from; after a run, that they end in."""
+
+    x: Array
+    gate: Array
+    state: Array
+    drift: Array
+    out: Array = field(default_factory=lambda: np.empty(0))
+    tally: Array = field(default_factory=lambda: np.empty(0))
+
+    def copy(self, room: Array) -> _Piece:
+        """Return the piece about to be run, its output going into `room`."""
+        return _Piece(
+            self.x, self.gate, self.state.copy(), self.drift.copy(), room[: len(self.x)],
+            np.zeros((self.state.shape[2], TALLIES)),
+        )  # fmt: skip
+
+    def take(self, other: _Piece, lanes: npt.NDArray[np.bool_ | np.intp]) -> None:
+        """Take some lanes' results from another run of the same piece."""
+        self.state[..., lanes] = other.state[..., lanes]
+        self.drift[..., lanes] = other.drift[..., lanes]
+        self.out[:, lanes] = other.out[:, lanes]
+        self.tally[lanes] = other.tally[lanes]
 
 
 class LaneRunner:
@@ -225,122 +253,91 @@ class LaneRunner:
         return out, tally
 
     def _run_into(self, out: Array, x: Array, gate: Array, first: int) -> Tally:
-        """Run all lanes, the fast loop first, and write what follows the warm-up into `out`."""
-        tally = self._fast_pass(out, x, gate, first, passes=1)
-        again = np.arange(self.lanes) if tally is None else self._unfit(out, tally)
-        if tally is None:
-            tally = np.zeros((self.lanes, TALLIES))
-        if len(again):
-            better = np.empty_like(out)
-            counted = self._fast_pass(better, x, gate, first, passes=2)
-            assert counted is not None
-            out[:, again] = better[:, again]
-            tally[again] = counted[again]
-            again = again[np.isin(again, self._unfit(better, counted))]
-        if len(again):
-            self._carefully(again, out, x, gate, first, tally)
-        total = [float(count) for count in tally.sum(axis=0)]
-        steps = float(len(again) * len(out))
-        return Tally(
-            gate_source=total[GATE_SOURCE],
-            gate_drain=total[GATE_DRAIN],
-            low_input=total[LOW_INPUT],
-            high_input=total[HIGH_INPUT],
-            rail=total[RAIL],
-            stuck=total[STUCK],
-            careful_steps=steps,
-        )
+        """Run all lanes piece by piece and write what follows the warm-up into `out`.
 
-    def _fast_pass(
-        self, out: Array, x: Array, gate: Array, first: int, *, passes: int
-    ) -> Array | None:
-        """Run the fast loop over all lanes and return its tally, (lanes, TALLIES).
-
-        With one pass it gives up, and returns None, as soon as most lanes need more: noise,
-        for one, cannot be extrapolated, and going on would be work for nothing.
+        Each piece is tried with the loop of one pass. Lanes for which that is not enough
+        are taken from the loop of two passes, and those for which even that is not, or
+        which come to a rail, from the careful loop, all from the same state. What a lane
+        gets depends on that lane alone, wherever it lies and whatever runs beside it.
         """
-        run, size = self._fast[passes - 1]
         state = np.zeros((STATES, self.stages, self.lanes))
         drift = np.zeros((3, self.lanes))
-        work = np.zeros(size)
-
-        def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
-            run(
-                x, gate, out, self.lane_table, self.stage_table, state,
-                drift, self.into_bus, self.bus_leak,
-                CONDUCTING_V, *self.common_mode, self.keep, work, tally,
-            )  # fmt: skip
-
-        def hopeless(tally: Array) -> bool:
-            return passes == 1 and len(self._past_limits(tally)) > self.lanes // 2
-
-        return self._in_pieces(piece, out, x, gate, first, hopeless)
-
-    def _carefully(
-        self,
-        chosen: npt.NDArray[np.intp],
-        out: Array,
-        x: Array,
-        gate: Array,
-        first: int,
-        tally: Array,
-    ) -> None:
-        """Do the chosen lanes again with the careful loop."""
-        careful = careful_kernel(self.soft, self.half_drain)
-        state = np.zeros((STATES, self.stages, self.lanes))
-        drift = np.zeros((3, self.lanes))
-        better = np.empty_like(out)
-
-        def piece(x: Array, gate: Array, out: Array, tally: Array) -> None:
-            for lane in chosen:
-                careful(
-                    x, gate, out, self.lane_table, self.stage_table, state,
-                drift, self.into_bus, self.bus_leak,
-                    CONDUCTING_V, *self.common_mode, self.keep, lane, self.frm,
-                    *self.rails, tally,
-                )  # fmt: skip
-
-        counted = self._in_pieces(piece, better, x, gate, first, lambda _tally: False)
-        assert counted is not None
-        out[:, chosen] = better[:, chosen]
-        tally[chosen] = counted[chosen]
-
-    def _in_pieces(
-        self,
-        piece: Callable[[Array, Array, Array, Array], None],
-        out: Array,
-        x: Array,
-        gate: Array,
-        first: int,
-        give_up: Callable[[Array], bool],
-    ) -> Array | None:
-        """Feed a loop piece by piece, so that its working set stays in the cache."""
+        total = np.zeros((self.lanes, TALLIES))
+        waiting = np.zeros(self.lanes, int)
+        careful_steps = 0
         made = np.empty((PIECE, self.lanes))
-        warming, tally = np.zeros((self.lanes, TALLIES)), np.zeros((self.lanes, TALLIES))
         edges = [*range(0, first, PIECE), *range(first, len(x), PIECE), len(x)]
         for begin, end in pairwise(edges):
             block, bus = (np.ascontiguousarray(a[begin:end]) for a in (x, gate))
-            rows = made[: end - begin]
-            piece(block, bus, rows, tally if begin >= first else warming)
-            if begin >= first:
-                out[begin - first : end - first] = rows
-                if give_up(tally):
-                    return None
-        return tally
+            start = _Piece(block, bus, state, drift)
+            warming = begin < first
+            chosen = waiting > 0
+            waiting[chosen] -= 1
+            result = start.copy(made)
+            if not chosen.all():
+                self._fast_pass(result, passes=1)
+                failed = self._unfit(result, warming) & ~chosen
+                waiting[failed] = STICKY
+                chosen |= failed
+            if chosen.any():
+                better = start.copy(np.empty_like(made))
+                self._fast_pass(better, passes=2)
+                result.take(better, chosen)
+                hard = np.flatnonzero(chosen & self._unfit(result, warming))
+                if len(hard):
+                    best = start.copy(np.empty_like(made))
+                    self._carefully(best, hard)
+                    result.take(best, hard)
+                    careful_steps += 0 if warming else len(hard) * (end - begin)
+            state, drift = result.state, result.drift
+            if not warming:
+                out[begin - first : end - first] = result.out[: end - begin]
+                total += result.tally
+        counts = [float(count) for count in total.sum(axis=0)]
+        return Tally(
+            gate_source=counts[GATE_SOURCE],
+            gate_drain=counts[GATE_DRAIN],
+            low_input=counts[LOW_INPUT],
+            high_input=counts[HIGH_INPUT],
+            rail=counts[RAIL],
+            stuck=counts[STUCK],
+            careful_steps=float(careful_steps),
+        )
 
-    def _past_limits(self, tally: Array) -> npt.NDArray[np.intp]:
-        """Return the lanes that came to a rail, corrected too much or had the gate run away."""
+    def _fast_pass(self, piece: _Piece, *, passes: int) -> None:
+        """Run the fast loop over all lanes of a piece."""
+        run, size = self._fast[passes - 1]
+        run(
+            piece.x, piece.gate, piece.out, self.lane_table, self.stage_table, piece.state,
+            piece.drift, self.into_bus, self.bus_leak, CONDUCTING_V, *self.common_mode,
+            self.keep, np.zeros(size), piece.tally,
+        )  # fmt: skip
+
+    def _carefully(self, piece: _Piece, lanes: npt.NDArray[np.intp]) -> None:
+        """Run the careful loop over some lanes of a piece."""
+        careful = careful_kernel(self.soft, self.half_drain)
+        for lane in lanes:
+            careful(
+                piece.x, piece.gate, piece.out, self.lane_table, self.stage_table, piece.state,
+                piece.drift, self.into_bus, self.bus_leak, CONDUCTING_V, *self.common_mode,
+                self.keep, lane, self.frm, *self.rails, piece.tally,
+            )  # fmt: skip
+
+    def _unfit(self, piece: _Piece, warming: bool) -> npt.NDArray[np.bool_]:
+        """Return which lanes came to a rail, corrected too much or had the gate run away.
+
+        While warming up, from rest into the middle of a riff, all of that is to be
+        expected and soon forgotten. A lane that ran away ends in NaN, which the loop's
+        comparisons pass over.
+        """
+        lost = ~np.isfinite(piece.state).all(axis=(0, 1))
+        if warming:
+            return np.asarray(lost)
         limit = min(abs(rail) for rail in self.rails)
+        tally = piece.tally
         fit = (tally[:, TOP] < limit) & (tally[:, CHANGE] < self.change_limit_v)
         fit &= tally[:, BUS] < BUS_STEP_V
-        return np.flatnonzero(~fit)
-
-    def _unfit(self, out: Array, tally: Array) -> npt.NDArray[np.intp]:
-        """Return the lanes to be done again.
-
-        A lane that ran away ends in NaN, which the loop's comparisons pass over.
-        """
-        return np.union1d(self._past_limits(tally), np.flatnonzero(~np.isfinite(out[-1])))
+        return np.asarray(lost | ~fit)
 
 
 def _columns(track: Array, lanes: int, length: int, warm: int) -> Array:
