@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 import platform
+from functools import cache
 from importlib.metadata import version
 from typing import Any
 
@@ -15,6 +16,13 @@ from .plan import EnginePlan
 from .setup import Setup
 
 LIBRARIES = ("numba", "numpy", "scipy", "soundfile", "soxr")
+
+
+@cache
+def library_versions() -> dict[str, str]:
+    """Return the versions of the libraries that decide a take's samples, and Python's."""
+    found = {name: version(name) for name in LIBRARIES}
+    return found | {"python": platform.python_version()}
 
 
 def take_record(
@@ -26,8 +34,7 @@ def take_record(
     """Return a take's provenance: no times, no folders, so that equal takes are equal bytes."""
     return {
         "sweepset": version("sweepset"),
-        "libraries": {name: version(name) for name in LIBRARIES}
-        | {"python": platform.python_version()},
+        "libraries": library_versions(),
         "input": source,
         "dry": setup is None,
         "take": None if setup is None else setup.as_record(),

@@ -26,6 +26,7 @@ from .plan import EnginePlan, plan_engine
 Array = npt.NDArray[np.float64]
 
 DEFAULT_FULL_SCALE_V = 1.0
+PLAN_STEP_V = 0.05
 # Silicon parts are specified over this range of channel temperature at most.
 CELSIUS_RANGE = (-55.0, 150.0)
 
@@ -221,12 +222,21 @@ def plan_takes(setups: Sequence[Setup], sample_rate: float) -> list[EnginePlan]:
         key = (setup.circuit, setup.jfets)
         low, high = ranges.get(key, (math.inf, -math.inf))
         ranges[key] = (min(low, setup.gate_low_v), max(high, setup.gate_high_v))
+    ranges = {key: _rounded_out(*span) for key, span in ranges.items()}
     plans = {key: _plan(*key, *span, sample_rate) for key, span in ranges.items()}
     factor = max((plan.factor for plan in plans.values()), default=1)
     for key, plan in plans.items():
         if plan.factor < factor:
             plans[key] = _plan(*key, *ranges[key], sample_rate, least_factor=factor)
     return [plans[setup.circuit, setup.jfets] for setup in setups]
+
+
+def _rounded_out(low_v: float, high_v: float) -> tuple[float, float]:
+    """Return a range a little wider, so that takes at like trimmer positions share a plan."""
+    return (
+        math.floor(low_v / PLAN_STEP_V) * PLAN_STEP_V,
+        math.ceil(high_v / PLAN_STEP_V) * PLAN_STEP_V,
+    )
 
 
 # A plan costs trial runs; takes of one set at several rates or riffs share it.

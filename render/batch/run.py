@@ -241,9 +241,12 @@ class Batch:
                         break
                 if not running:
                     break
-                finished, running = wait(running, return_when=FIRST_COMPLETED)
-                for future in finished:
-                    self._index.add(future.result())
+                finished = wait(running, return_when=FIRST_COMPLETED).done
+                # Whole ones first: one that failed must not take its fellows along.
+                for future in sorted(finished, key=lambda one: one.exception() is not None):
+                    row = future.result()
+                    running.discard(future)
+                    self._index.add(row)
                     done += 1
                 now = time.monotonic()
                 if progress:

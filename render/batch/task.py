@@ -6,7 +6,6 @@ import hashlib
 import json
 from dataclasses import asdict, dataclass, replace
 from functools import cache, lru_cache
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -18,7 +17,7 @@ from ...models.jfet import Jfet
 from ...models.quantity import Setting
 from ..audio import AudioReader, Encoding, sidecar_path
 from ..audition import safe_name
-from ..provenance import LIBRARIES
+from ..provenance import library_versions
 from ..setup import TakeSettings, changed_circuit, circuit_hash, set_up
 from ..take import render_file
 from .takeplan import PlannedTake
@@ -62,7 +61,7 @@ class TakeTask:
         trim, rates = planned.trim, (asked.rate, planned.bias_rate)
         told = {
             "code": code_hash(),
-            "libraries": {name: version(name) for name in LIBRARIES},
+            "libraries": library_versions(),
             "riff": self.riff_sha256,
             "circuit": circuit_hash(asked.circuit),
             "parts": [_law(jfet) for jfet in asked.jfets],
