@@ -13,7 +13,7 @@ if TYPE_CHECKING:
     from ..audition import Audition, AuditionTake
     from ..pairs import ComparedPair
 
-JOINED_NAME = "joined.wav"
+JOINED_NAME, JOINED_TEXT = "joined.wav", "joined.txt"
 TRACKS_STEM = "notch_tracks"
 MOST_DIFFERENCES = 6
 
@@ -63,7 +63,7 @@ class Beside:
             return
         stems = file_names([f"{self.riff.stem} {take.name}" for take in takes])
         names = [PAGE_NAME] if self.page else []
-        names += [JOINED_NAME] if self.joined else []
+        names += [JOINED_NAME, JOINED_TEXT] if self.joined else []
         if self.pictures != "none":
             names += [f"{TRACKS_STEM}.{self.pictures}"]
             # Which pairs there will be is known only once the takes are set up.
@@ -98,6 +98,7 @@ class Beside:
         list of ComparedPair, list of str, str
             What there is to say of pairs of takes, the files written, and the page's notice.
         """
+        from ...models.atomic import write_text_atomically
         from ..joined import join_takes, musical_joins
         from ..page.data import page_takes
         from ..pairs import compare_pairs
@@ -117,8 +118,13 @@ class Beside:
             first, second = takes[pairs[0].first], takes[pairs[0].second]
             joins = musical_joins(self.riff)
             join_takes(first.path, second.path, self.folder / JOINED_NAME, joins)
-            places = ", ".join(f"{join:.2f} s" for join in joins) or "nowhere: the riff is short"
-            written.append(f"{JOINED_NAME}: {first.name} and {second.name} by turns, at {places}")
+            names = (first.name, second.name)
+            turns = [f"{0.0:.2f} s: {names[0]}"]
+            turns += [f"{join:.2f} s: {names[n % 2]}" for n, join in enumerate(joins, start=1)]
+            write_text_atomically(self.folder / JOINED_TEXT, "\n".join(turns) + "\n")
+            changes = f"{len(joins)} changes" if joins else "no change: the riff is short"
+            written.append(f"{JOINED_NAME}: {names[0]} and {names[1]} by turns, {changes}")
+            written.append(f"{JOINED_TEXT}: who plays when")
         if self.pictures != "none":
             written += self._draw(made, pairs, tell)
         return pairs, written, notice

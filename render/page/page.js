@@ -119,6 +119,7 @@
   const mark = () => {
     document.querySelectorAll("#takes button").forEach((button, n) => {
       button.setAttribute("aria-pressed", String(n === now));
+      if (n === now) button.scrollIntoView({ block: "nearest" });
     });
     document.querySelectorAll("#takes input").forEach((radio, n) => {
       radio.checked = n === other;

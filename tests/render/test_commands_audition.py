@@ -28,6 +28,7 @@ def test_page_pictures_and_joined_wav_stand_beside_the_takes(riff, tmp_path, cap
     assert {"listen.html", "joined.wav", "notch_tracks.png"} <= names
     assert {"2_riff_close_9-00_spectrogram.png", "3_riff_wide_9-00_channels.png"} <= names
     assert "difference_2_3.png" in names
+    assert (out / "joined.txt").read_text() == "0.00 s: close 9:00\n"
     [pair] = record["pairs"]
     assert (pair["first"], pair["second"]) == ("close 9:00", "wide 9:00")
     assert pair["level_rms_db"] > 0.1
@@ -73,7 +74,7 @@ def test_a_very_short_or_silent_riff_works(tmp_path, capsys):
         asked = ["audition", str(tmp_path / f"{name}.wav"), *ASK, "-o", str(out)]
         assert main([*asked, "--pictures", "svg"]) == 0
         assert (out / "listen.html").stat().st_size > 20_000
-        assert "nowhere: the riff is short" in capsys.readouterr().out
+        assert "no change: the riff is short" in capsys.readouterr().out
 
 
 @pytest.mark.parametrize(

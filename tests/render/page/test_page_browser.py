@@ -327,6 +327,9 @@ def test_forty_takes_a_short_riff_and_silence(make_page, tmp_path, visit):
     for _ in range(39):
         seen.tab.keyboard.press("n")
     assert "take 39" in seen.tab.locator("#state").inner_text()
+    last = seen.tab.locator("#takes button").last.bounding_box()
+    shown = seen.tab.locator("#takes").bounding_box()
+    assert last["y"] + last["height"] <= shown["y"] + shown["height"] + 1
     seen.tab.locator("#play", has_text="Play").wait_for()  # it came to its end
 
 
