@@ -56,6 +56,8 @@ _STEP = 1e-4
 _SMALL = 1e-2
 # Where the Gauss-Newton iteration counts as settled, in standard errors of the result.
 _SETTLED = 1e-5
+# A step that takes less than this share off a part's misfit is not worth another.
+_WORTH = 1e-7
 
 
 @dataclass(frozen=True)
@@ -628,9 +630,11 @@ def _descend(problem: _Problem, prior: _Prior, z: Array, shown: Array, weight: A
                 break
             share = np.where(worse, share / 2.0, share)
         better = new <= value * (1.0 + 1e-9) + 1e-9
+        # Readings that contradict one another leave a long, bent, all but level valley.
+        gained = value - new > _WORTH * (1.0 + value)
         z = np.where(better[:, None], tried, z)
         value = np.where(better, new, value)
-        if not np.any(better & (left * share >= _SETTLED)):
+        if not np.any(better & gained & (left * share >= _SETTLED)):
             return z
     return z
 

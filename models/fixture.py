@@ -280,6 +280,10 @@ class ErrorSource:
     group: Array | None = None
 
 
+# No meter reading of a small-signal JFET is beyond these [V], [A].
+MOST_READING = {"V": 100.0, "A": 1.0}
+
+
 class _Reading(Part):
     """What all kinds of reading have."""
 
@@ -323,8 +327,18 @@ class _Reading(Part):
         Raises
         ------
         ValueError
-            If it cannot be read.
+            If it cannot be read, or is no reading of a small-signal JFET.
         """
+        value = self._written(written)
+        most = MOST_READING[self.quantity]
+        if not abs(value) <= most:
+            raise ValueError(
+                f"{written.strip()[:40]} is far beyond any reading of such a part; expected at "
+                f"most {most:g} {self.quantity}"
+            )
+        return value
+
+    def _written(self, written: str) -> float:
         text = written.strip()
         if re.fullmatch(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]{1,2})?", text):
             unit = getattr(self, "unit", self.quantity)
