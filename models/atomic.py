@@ -55,10 +55,10 @@ def atomic_path(target: str | Path) -> Iterator[Path]:
         )
     except OSError as fault:
         raise explain_write_fault(fault, target) from None
-    os.close(handle)
     temporary = Path(name)
     try:
         try:
+            os.close(handle)
             yield temporary
             temporary.chmod(_wanted_mode(target))
             _force_to_disk(temporary, os.O_RDWR)
