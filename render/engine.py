@@ -19,11 +19,11 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 import soxr
-from scipy.signal import lfilter
 
 from ..models.circuit import Circuit
 from ..models.gatebus import BusNode
 from ..models.jfet import Jfet
+from .filter_kernels import recursive
 from .lanes import LaneRunner, Tally
 from .plan import EnginePlan
 from .rules import ADAMS_4
@@ -348,13 +348,12 @@ class HighPass:
 
     def __init__(self, time_constant_s: float, rate_hz: float, channels: int) -> None:
         weights = np.array(ADAMS_4.weights) / (time_constant_s * rate_hz)
-        self._a = np.array([1.0, -1.0, 0.0, 0.0]) + weights
-        self._b = np.array([1.0, -1.0, 0.0, 0.0])
+        a = np.array([1.0, -1.0, 0.0, 0.0]) + weights
+        self._a, self._b = a / a[0], np.array([1.0, -1.0, 0.0, 0.0]) / a[0]
         self._state = np.zeros((3, channels))
 
     def __call__(self, x: Array) -> Array:
         """Return the next stretch, shape (frames, channels)."""
-        if not len(x):  # lfilter would give back a state of whatever lay in memory
-            return x
-        y, self._state = lfilter(self._b, self._a, x, axis=0, zi=self._state)
-        return np.asarray(y)
+        y = np.empty_like(x)
+        recursive(self._b, self._a, x, self._state, y)
+        return y

@@ -30,6 +30,7 @@ import numpy as np
 import numpy.typing as npt
 
 from ..models.errors import InputError
+from .filter_kernels import recursive
 
 Array = npt.NDArray[np.float64]
 
@@ -73,7 +74,7 @@ def weighting_sections(sample_rate_hz: float) -> Array:
     Returns
     -------
     ndarray
-        Shape (2, 6), for :func:`scipy.signal.sosfilt`.
+        Shape (2, 6), each row ``b0 b1 b2 a0 a1 a2`` with ``a0`` 1.
     """
     k = math.tan(math.pi * SHELF_HZ / sample_rate_hz)
     high = 10.0 ** (SHELF_DB / 20.0)
@@ -167,12 +168,14 @@ class LoudnessMeter:
 
     def add(self, block: Array) -> None:
         """Take in a block, shape (n, channels), 1 at full scale."""
-        from scipy.signal import sosfilt
-
         if not len(block):
             return
         self._peak = max(self._peak, float(np.max(np.abs(block))))
-        weighted, self._state = sosfilt(self._sections, block, axis=0, zi=self._state)
+        weighted = np.ascontiguousarray(block, float)
+        for section, state in zip(self._sections, self._state, strict=True):
+            made = np.empty_like(weighted)
+            recursive(section[:3], section[3:], weighted, state, made)
+            weighted = made
         powers = np.square(weighted) @ self._weights
         start = 0
         while start < len(powers):
