@@ -7,7 +7,7 @@ import json
 import platform
 from pathlib import Path
 
-from . import engine_speed, ngspice_cost
+from . import engine_speed, ngspice_cost, rule_cost
 
 
 def main() -> None:
@@ -16,7 +16,14 @@ def main() -> None:
     parser.add_argument("--json", type=Path, help="store the rows here")
     options = parser.parse_args()
     rows = []
-    for bench in (engine_speed.bare_chain, engine_speed.one_take, ngspice_cost.against_ngspice):
+    for bench in (
+        engine_speed.bare_chain,
+        engine_speed.one_take,
+        engine_speed.many_takes,
+        rule_cost.error_against_cost,
+        rule_cost.cost_against_size,
+        ngspice_cost.against_ngspice,
+    ):
         for entry in bench():
             rows.append(entry)
             print(

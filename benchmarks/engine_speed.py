@@ -8,6 +8,7 @@ import subprocess
 import tempfile
 import time
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
@@ -51,6 +52,31 @@ def one_take(seconds: float = 30.0) -> list[Row]:
 
             name = f"one take of {seconds:g} s, engine, {workers} worker(s)"
             rows.append(row(name, law, seconds / best(take, 3), "x real time"))
+    return rows
+
+
+def many_takes(takes: int = 16, seconds: float = 10.0) -> list[Row]:
+    """Time the engine on takes side by side, as a batch runs them: one worker, all cores."""
+    x = scene.riff(seconds)[:, None]
+    rows = []
+    for law, knee_v in scene.KNEES_V.items():
+        spent = {}
+        for workers in (1, os.cpu_count() or 1):
+
+            def one(_number: int, knee_v: float = knee_v) -> None:
+                engine = scene.engine(knee_v, 1)
+                for i in range(0, len(x), 65536):
+                    engine.process(x[i : i + 65536])
+                engine.finish()
+
+            def batch(workers: int = workers, one: Callable[[int], None] = one) -> None:
+                with ThreadPoolExecutor(workers) as pool:
+                    list(pool.map(one, range(takes)))
+
+            spent[workers] = best(batch, 1)
+            name = f"{takes} takes of {seconds:g} s, {workers} worker(s)"
+            rows.append(row(name, law, takes * seconds / spent[workers], "x real time"))
+        rows.append(row("all workers re one", law, spent[1] / min(spent.values()), "ratio"))
     return rows
 
 
