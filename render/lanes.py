@@ -51,8 +51,9 @@ LEFT_OVER_V = 1e-5
 # The furthest the gate may go while its side of the law is carried on by expansion: the
 # third-order rest, (2 mV/knee)^3/6 of it, is worth less than a microvolt at the drain.
 BUS_STEP_V = 2e-3
-# Frames fed to a loop at a time, so that its working set stays in the cache.
-PIECE = 512
+# Steps of all lanes together that are fed to a loop at a time: few enough for the cache
+# and for a repair to cost little, many enough for what surrounds the loop to cost little.
+PIECE_STEPS = 32_768
 # Pieces for which a lane that needed two passes gets them unasked.
 STICKY = 1
 
@@ -265,8 +266,10 @@ class LaneRunner:
         total = np.zeros((self.lanes, TALLIES))
         waiting = np.zeros(self.lanes, int)
         careful_steps = 0
-        made = np.empty((PIECE, self.lanes))
-        edges = [*range(0, first, PIECE), *range(first, len(x), PIECE), len(x)]
+        length = max(PIECE_STEPS // self.lanes, 1)
+        made = np.empty((length, self.lanes))
+        work = np.zeros(max(size for _, size in self._fast))
+        edges = [*range(0, first, length), *range(first, len(x), length), len(x)]
         for begin, end in pairwise(edges):
             block, bus = (np.ascontiguousarray(a[begin:end]) for a in (x, gate))
             start = _Piece(block, bus, state, drift)
@@ -275,13 +278,13 @@ class LaneRunner:
             waiting[chosen] -= 1
             result = start.copy(made)
             if not chosen.all():
-                self._fast_pass(result, passes=1)
+                self._fast_pass(result, work, passes=1)
                 failed = self._unfit(result, warming) & ~chosen
                 waiting[failed] = STICKY
                 chosen |= failed
             if chosen.any():
                 better = start.copy(np.empty_like(made))
-                self._fast_pass(better, passes=2)
+                self._fast_pass(better, work, passes=2)
                 result.take(better, chosen)
                 hard = np.flatnonzero(chosen & self._unfit(result, warming))
                 if len(hard):
@@ -304,13 +307,13 @@ class LaneRunner:
             careful_steps=float(careful_steps),
         )
 
-    def _fast_pass(self, piece: _Piece, *, passes: int) -> None:
+    def _fast_pass(self, piece: _Piece, work: Array, *, passes: int) -> None:
         """Run the fast loop over all lanes of a piece."""
-        run, size = self._fast[passes - 1]
+        run, _ = self._fast[passes - 1]
         run(
             piece.x, piece.gate, piece.out, self.lane_table, self.stage_table, piece.state,
             piece.drift, self.into_bus, self.bus_leak, CONDUCTING_V, *self.common_mode,
-            self.keep, np.zeros(size), piece.tally,
+            self.keep, work, piece.tally,
         )  # fmt: skip
 
     def _carefully(self, piece: _Piece, lanes: npt.NDArray[np.intp]) -> None:
