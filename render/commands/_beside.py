@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from ._page import PAGE_NAME, page_of, write_page
+from ._page import page_of, write_page
 
 if TYPE_CHECKING:
     from ..audition import Audition, AuditionTake
@@ -26,8 +26,8 @@ class Beside:
     ----------
     folder, riff : Path
         Where to, and of what.
-    page : bool
-        Whether to write the listening page.
+    page_name : str or None
+        The listening page's file name; None for no page.
     excerpt_s : (float, float) or None
         The stretch it holds.
     pictures : str
@@ -38,7 +38,7 @@ class Beside:
 
     folder: Path
     riff: Path
-    page: bool
+    page_name: str | None
     excerpt_s: tuple[float, float] | None
     pictures: str
     joined: bool
@@ -62,7 +62,7 @@ class Beside:
         if not self.folder.is_dir():
             return
         stems = file_names([f"{self.riff.stem} {take.name}" for take in takes])
-        names = [PAGE_NAME] if self.page else []
+        names = [] if self.page_name is None else [self.page_name]
         names += [JOINED_NAME, JOINED_TEXT] if self.joined else []
         if self.pictures != "none":
             names += [f"{TRACKS_STEM}.{self.pictures}"]
@@ -106,13 +106,13 @@ class Beside:
         takes = page_takes(made)
         pairs = compare_pairs(made, takes, tell and (lambda share: tell("comparing", share)))
         written, notice = [], ""
-        if self.page:
+        if self.page_name is not None:
             if tell:
                 tell("listening page", 0.9)
             said = [pair.as_page_pair() for pair in pairs]
             data = page_of(made, self.riff.name, said, self.excerpt_s)
-            write_page(data, self.folder / PAGE_NAME)
-            written.append(PAGE_NAME)
+            write_page(data, self.folder / self.page_name)
+            written.append(self.page_name)
             notice = data.notice
         if self.joined and pairs:
             first, second = takes[pairs[0].first], takes[pairs[0].second]

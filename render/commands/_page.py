@@ -13,6 +13,25 @@ if TYPE_CHECKING:
 PAGE_NAME = "listen.html"
 
 
+def page_name(text: str) -> str:
+    """Return the page's file name.
+
+    Raises
+    ------
+    InputError
+        If it is not the name of an HTML file beside the takes.
+    """
+    from ...models.errors import InputError
+
+    beside = text == Path(text).name and not set(text) & set("/\\\0")
+    if not beside or not text.lower().endswith((".html", ".htm")):
+        raise InputError(
+            f"--page {text!r}: expected a name without a folder, ending in .html; the page lies "
+            "beside its takes"
+        )
+    return text
+
+
 def page_of(
     made: Audition,
     title: str,

@@ -53,9 +53,14 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
     _settings.add_celsius_argument(parser)
     _settings.add_take_arguments(parser)
-    parser.add_argument(
-        "--no-page", action="store_true", help=f"do not write the listening page {PAGE_NAME}"
+    pages = parser.add_mutually_exclusive_group()
+    pages.add_argument(
+        "--page",
+        metavar="NAME",
+        default=PAGE_NAME,
+        help=f"name of the listening page in that folder (default: {PAGE_NAME})",
     )
+    pages.add_argument("--no-page", action="store_true", help="do not write the listening page")
     parser.add_argument(
         "--no-joined",
         action="store_true",
@@ -84,6 +89,7 @@ def run(args: argparse.Namespace) -> int:
     from ..audition import audition_takes, render_audition
     from ..setup import TakeSettings
     from ._beside import Beside
+    from ._page import page_name
     from ._screen import print_json, print_table, progress, say, warn
     from ._sets import named_sets, read_sets
 
@@ -110,7 +116,7 @@ def run(args: argparse.Namespace) -> int:
     beside = Beside(
         folder=Path(args.out),
         riff=Path(args.riff),
-        page=not args.no_page,
+        page_name=None if args.no_page else page_name(args.page),
         excerpt_s=_excerpt(args),
         pictures=args.pictures,
         joined=not args.no_joined,
@@ -155,8 +161,8 @@ def run(args: argparse.Namespace) -> int:
             say(f"  listen at {', '.join(f'{at:.1f} s' for at in pair.difference.moments_s)}")
     for text in written:
         say(f"  {text}")
-    if beside.page:
-        page = beside.folder / PAGE_NAME
+    if beside.page_name is not None:
+        page = beside.folder / beside.page_name
         say(f"open {page} in a browser ({page.stat().st_size / 1e6:.1f} MB). {notice}".rstrip())
     return 0
 

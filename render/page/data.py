@@ -162,14 +162,17 @@ def page_data(
         middle = round(moments[0] * rate) if moments else fitting // 2
         start = min(max(middle - fitting // 2, 0), frames - fitting)
         stop = start + fitting
+    frame_bytes = 3 * facts[0].channels * len(takes)
     if (start, stop) != (0, frames):
         notice = (
             f"This page holds {start / rate:.1f} s to {stop / rate:.1f} s of the riff's "
             f"{frames / rate:.1f} s; the WAV files beside it are whole. "
             "Choose another stretch with --excerpt."
         )
+    if frames > fitting and excerpt_s is None:
+        notice += f" A page of all of it would have about {frame_bytes * frames / 1e6:.0f} MB."
     if (stop - start) > fitting:
-        size = 3 * facts[0].channels * len(takes) * (stop - start) / 1e6
+        size = frame_bytes * (stop - start) / 1e6
         notice += f" It is a large page (about {size:.0f} MB) and opens slowly."
     channels = {1: "mono", 2: "stereo"}.get(facts[0].channels, f"{facts[0].channels} channels")
     return PageData(

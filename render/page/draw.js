@@ -6,7 +6,7 @@ const draw = (() => {
   const inks = () => {
     const style = getComputedStyle(document.documentElement);
     const ink = (name) => style.getPropertyValue(name).trim();
-    return { text: ink("--ink"), quiet: ink("--quiet"), line: ink("--line"), warm: ink("--warm"), cool: ink("--cool") };
+    return { text: ink("--ink"), quiet: ink("--quiet"), line: ink("--line"), card: ink("--card"), warm: ink("--warm"), cool: ink("--cool") };
   };
 
   // A canvas as large as it is shown; returns its pen, and its size in CSS pixels.
@@ -87,10 +87,17 @@ const draw = (() => {
     playhead(pen, ink, across(position), height);
   };
 
+  const placeIn = (cycle, points, seconds) => ((seconds % cycle.period) / cycle.period) * points;
+  const stopped = (cycle, stage, seconds) => {
+    const track = cycle.stopped[stage];
+    return track[Math.floor(placeIn(cycle, track.length, seconds)) % track.length] === "1";
+  };
+  // Straight lines between the cycle's instants; nothing next to nothing.
   const at = (cycle, track, seconds) => {
-    const points = track.length;
-    const place = ((((seconds % cycle.period) + cycle.period) % cycle.period) / cycle.period) * points;
-    return track[Math.floor(place) % points];
+    const place = placeIn(cycle, track.length, seconds);
+    const before = Math.floor(place);
+    const [low, high] = [track[before % track.length], track[(before + 1) % track.length]];
+    return low === null || high === null ? null : low + (place - before) * (high - low);
   };
 
   const trace = (pen, values) => {
@@ -112,7 +119,7 @@ const draw = (() => {
 
   // Notch tracks of the take that plays and of the compared one; the stages' break
   // frequencies of the first, crosses where a stage has stopped.
-  const sweep = (canvas, now, other, seconds, start, position, withStages) => {
+  const sweep = (canvas, now, other, { seconds, start, position, loop }, withStages) => {
     const { pen, width, height } = open(canvas);
     const ink = inks();
     const across = (s) => LEFT + (s / seconds) * (width - LEFT - 4);
@@ -121,6 +128,7 @@ const draw = (() => {
       hz === null || hz < LOW_HZ || hz > HIGH_HZ
         ? null
         : bottom - (Math.log(hz / LOW_HZ) / Math.log(HIGH_HZ / LOW_HZ)) * (bottom - 4);
+    shadeLoop(pen, ink, loop, across, bottom);
     pen.lineWidth = 1;
     pen.strokeStyle = ink.line;
     pen.fillStyle = ink.text;
@@ -158,7 +166,7 @@ const draw = (() => {
         line.forEach(([x, y], column) => {
           if (column % 9 || y === null) return;
           const s = (column / columns) * seconds + start;
-          if (at(now, now.stopped[stage], s) !== "1") return;
+          if (!stopped(now, stage, s)) return;
           pen.beginPath();
           pen.moveTo(x - 3, y - 3);
           pen.lineTo(x + 3, y + 3);
@@ -166,6 +174,16 @@ const draw = (() => {
           pen.lineTo(x + 3, y - 3);
           pen.stroke();
         });
+        // The stage's number on its line, each at another place so that they stay apart.
+        const [x, y] = line[Math.round(((stage + 0.5) / now.breaks.length) * columns)];
+        if (y === null) return;
+        pen.strokeStyle = ink.card;
+        pen.lineWidth = 5;
+        pen.fillStyle = ink.text;
+        pen.textAlign = "center";
+        pen.textBaseline = "middle";
+        pen.strokeText(String(stage + 1), x, y);
+        pen.fillText(String(stage + 1), x, y);
       });
     }
     if (other) {

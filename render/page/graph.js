@@ -4,6 +4,10 @@ const graph = (() => {
   const SWITCH_S = 0.004;
   // A loop's last frames lean over to what comes before its first ones, over this time [s].
   const SEAM_S = 0.012;
+  // In a trial every change goes through a silence this long [s], by then below -60 dB. A
+  // blend of two takes can be heard although the takes themselves cannot be told apart,
+  // and there would be none where the hidden take is the one that played.
+  const SILENCE_S = 0.03;
 
   // One source and one gain a buffer, all into one node; nothing sounds yet.
   const wire = (context, buffers, target) =>
@@ -33,9 +37,13 @@ const graph = (() => {
     }
   };
 
-  const choose = (voices, number, when) => {
+  const choose = (voices, number, when, throughSilence) => {
     voices.forEach(({ gain }, place) => {
-      gain.gain.setTargetAtTime(place === number ? 1 : 0, when, SWITCH_S);
+      // A change asked for during another's silence takes its place.
+      gain.gain.cancelScheduledValues(when);
+      if (throughSilence || place !== number) gain.gain.setTargetAtTime(0, when, SWITCH_S);
+      if (place !== number) return;
+      gain.gain.setTargetAtTime(1, when + (throughSilence ? SILENCE_S : 0), SWITCH_S);
     });
   };
 
@@ -64,5 +72,5 @@ const graph = (() => {
     };
   };
 
-  return Object.freeze({ wire, wholeFrames, start, choose, blendSeam, SWITCH_S, SEAM_S });
+  return Object.freeze({ wire, wholeFrames, start, choose, blendSeam, SWITCH_S, SEAM_S, SILENCE_S });
 })();

@@ -47,11 +47,13 @@
   const paint = () => {
     const position = player.position();
     const blind = trial !== null;
-    draw.wave(byId("wave"), blind ? null : buffers[now], data.seconds, position, player.loop);
+    // In a trial the first of the two named takes is drawn, whatever plays.
+    draw.wave(byId("wave"), buffers[blind ? trial.first : now], data.seconds, position, player.loop);
     if (!blind && !byId("sweep-part").hidden) {
       const shown = data.takes[now].cycle;
       const against = other === now ? null : data.takes[other].cycle;
-      draw.sweep(byId("sweep"), shown, against, data.seconds, data.start, position, byId("stages").checked);
+      const place = { seconds: data.seconds, start: data.start, position, loop: player.loop };
+      draw.sweep(byId("sweep"), shown, against, place, byId("stages").checked);
     }
     byId("clock").textContent = `${time(position + data.start)} of ${time(data.seconds + data.start)}`;
     const seek = byId("seek");
@@ -100,9 +102,10 @@
     byId("pair").textContent = known ? known.sentence : "";
     const moments = byId("moments");
     moments.replaceChildren();
-    if (known && known.moments.length) {
+    const here = known ? known.moments.filter((s) => s >= data.start && s <= data.start + data.seconds) : [];
+    if (here.length) {
       add(moments, "span", "Listen at");
-      for (const moment of known.moments) {
+      for (const moment of here) {
         add(moments, "button", time(moment)).addEventListener("click", () => {
           player.seek(moment - data.start - 1);
           stale = true;
@@ -116,10 +119,17 @@
       `Notch tracks over the riff, 20 Hz to 20 kHz: ${data.takes[now].name}${other === now ? "" : ` against ${data.takes[other].name}`}.`,
     );
   };
+  // Within the list only: the page itself stays where the listener has put it.
+  const keepInSight = (line) => {
+    const list = byId("takes");
+    const [inner, outer] = [line.getBoundingClientRect(), list.getBoundingClientRect()];
+    if (inner.top < outer.top) list.scrollTop -= outer.top - inner.top;
+    if (inner.bottom > outer.bottom) list.scrollTop += inner.bottom - outer.bottom;
+  };
   const mark = () => {
     document.querySelectorAll("#takes button").forEach((button, n) => {
       button.setAttribute("aria-pressed", String(n === now));
-      if (n === now) button.scrollIntoView({ block: "nearest" });
+      if (n === now) keepInSight(button.parentElement);
     });
     document.querySelectorAll("#takes input").forEach((radio, n) => {
       radio.checked = n === other;
@@ -129,12 +139,14 @@
   };
   const hear = (number) => {
     if (number < 0 || number >= data.takes.length) return;
+    // To play the one set against means to change the two about.
+    if (number === other) other = now;
     now = number;
     player.choose(now);
     mark();
   };
   const against = (number) => {
-    other = number;
+    if (number !== now) other = number; // a take against itself shows nothing
     mark();
   };
   const swap = () => {
@@ -203,7 +215,14 @@
       : "Give a whole number of rounds from 5 to 50.";
     return fine;
   };
+  const showRound = (hint) => {
+    const text = `Round ${trial.round()} of ${trial.rounds}.${hint}`;
+    // Said again only when it changes, or a screen reader would repeat it.
+    if (byId("trial-round").textContent !== text) byId("trial-round").textContent = text;
+  };
   const hearVoice = (voice) => {
+    trial.hear(voice);
+    showRound("");
     player.choose(voice);
     if (!player.playing) player.begin();
     for (let n = 0; n < 3; n += 1) byId(`hear-${n}`).setAttribute("aria-pressed", String(n === voice));
@@ -212,11 +231,12 @@
   const nextRound = () => {
     player.load(trial.voices().map((n) => buffers[n]), 0);
     for (let n = 0; n < 3; n += 1) byId(`hear-${n}`).setAttribute("aria-pressed", String(n === 0));
-    byId("trial-round").textContent = `Round ${trial.round()} of ${trial.rounds}.`;
+    showRound("");
     showState();
   };
   const leave = () => {
     trial = null;
+    player.throughSilence = false;
     player.load(buffers, now);
     mark();
   };
@@ -232,12 +252,16 @@
     trial = makeTrial(Number(byId("trial-rounds").value), first, second);
     asked = `Which one is hidden: the first (${data.takes[first].name}) or the second (${data.takes[second].name})?`;
     byId("trial-question").textContent = asked;
+    player.throughSilence = true;
     showPanel("trial-run");
     nextRound();
     byId("hear-0").focus();
   };
   const say = (choice) => {
-    trial.answer(choice);
+    if (!trial.answer(choice)) {
+      showRound(" Hear the hidden one first.");
+      return;
+    }
     if (!trial.over()) {
       nextRound();
       return;
@@ -284,10 +308,10 @@
       "[": loopFrom,
       "]": loopTo,
       l: loopOff,
-      home: () => player.seek(0),
     };
     if (!pressing) acts[" "] = toggle;
     if (!sliding && !target.matches("input[type=radio]")) {
+      acts.home = () => player.seek(0);
       acts.arrowleft = () => move(-1);
       acts.arrowright = () => move(1);
     }
@@ -301,6 +325,8 @@
     const act = acts[low];
     if (!act) return;
     event.preventDefault();
+    // A key held down moves on, but answers, plays and marks once.
+    if (event.repeat && !["arrowleft", "arrowright", "n", "p"].includes(low)) return;
     act();
     stale = true;
   };
@@ -332,6 +358,9 @@
     byId("trial-second").value = String(other);
     byId("trial").hidden = data.takes.length < 2;
     byId("seek").max = data.seconds;
+    // A reloaded page may come with the old places of its sliders; the sound does not.
+    for (const [id, value] of [["seek", 0], ["level", player.levelDb], ["trial-rounds", 16]]) byId(id).value = value;
+    byId("stages").checked = true;
     const on = (id, event, act) => byId(id).addEventListener(event, act);
     on("play", "click", toggle);
     on("seek", "input", () => player.seek(Number(byId("seek").value)));
@@ -375,8 +404,13 @@
       buffers = found;
       byId("loading").textContent = `${found.length} takes of ${time(data.seconds)} are ready.`;
       byId("ready").disabled = false;
-      byId("ready").addEventListener("click", async () => {
-        await player.wake();
+      byId("ready").addEventListener("click", () => {
+        try {
+          player.wake();
+        } catch {
+          byId("loading").textContent = `This browser cannot play at ${data.rate} Hz. The WAV files beside this page hold the same sound.`;
+          return;
+        }
         byId("before").hidden = true;
         byId("bench").hidden = false;
         player.load(buffers, now);

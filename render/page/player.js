@@ -7,6 +7,7 @@ class Player {
     this.voice = 0;
     this.loop = null;
     this.playing = false;
+    this.throughSilence = false; // how a change of voice sounds, see graph.choose
     this.levelDb = -20;
     this.rest = 0; // where it stands while silent [s]
     this.unblend = [];
@@ -22,7 +23,7 @@ class Player {
       this.master.connect(this.context.destination);
     }
     this.setLevel(this.levelDb);
-    return this.context.resume();
+    this.context.resume();
   }
 
   setLevel(db) {
@@ -61,8 +62,10 @@ class Player {
     let offset = this.rest;
     if (this.loop && (offset < this.loop.from || offset >= this.loop.to)) offset = this.loop.from;
     if (offset >= this.seconds - 0.01) offset = 0;
+    this.context.resume(); // a telephone call may have put it to sleep
     const when = this.context.currentTime + 0.03;
     this.bus = this.context.createGain();
+    this.bus.gain.value = 0;
     this.bus.gain.setValueAtTime(0, when);
     this.bus.gain.setTargetAtTime(1, when, graph.SWITCH_S);
     this.bus.connect(this.master);
@@ -95,7 +98,8 @@ class Player {
 
   choose(voice) {
     this.voice = voice;
-    if (this.playing) graph.choose(this.voices, voice, this.context.currentTime);
+    if (!this.playing) return;
+    graph.choose(this.voices, voice, this.context.currentTime, this.throughSilence);
   }
 
   seek(seconds) {

@@ -4,6 +4,7 @@ const makeTrial = (rounds, first, second) => {
   crypto.getRandomValues(drawn);
   const hidden = Array.from(drawn, (byte) => byte & 1);
   const answers = [];
+  let heard = false;
 
   return Object.freeze({
     rounds,
@@ -12,8 +13,15 @@ const makeTrial = (rounds, first, second) => {
     // Numbers of the takes for the three voices of the round to come.
     voices: () => [first, second, hidden[answers.length] ? second : first],
     round: () => answers.length + 1,
+    hear: (voice) => {
+      heard = heard || voice === 2;
+    },
+    // An answer counts once the hidden take has been heard in its round; says whether it did.
     answer: (choice) => {
-      if (answers.length < rounds) answers.push(choice);
+      if (!heard || answers.length >= rounds) return false;
+      answers.push(choice);
+      heard = false;
+      return true;
     },
     over: () => answers.length >= rounds,
     // Only a finished trial has a result.
@@ -49,13 +57,15 @@ const trialText = {
 
   details: (result) => {
     const [low, high] = result.interval;
-    const power = result.power
-      .map(([rate, chance]) => `${Math.round(100 * rate)} %: ${trialText.percent(chance)}`)
-      .join(", ");
+    const [[rate, chance], ...more] = result.power;
+    const power = [
+      `a listener truly right ${Math.round(100 * rate)} % of the time reaches ${result.need} of ${result.rounds} in ${trialText.percent(chance)} of trials`,
+      ...more.map(([higher, often]) => `at ${Math.round(100 * higher)} % in ${trialText.percent(often)}`),
+    ].join("; ");
     return [
       `Your true rate of right answers lies between ${trialText.percent(low)} and ${trialText.percent(high)} (exact interval, 95 % confidence; guessing is 50 %).`,
       `The rule was fixed before the start: ${result.need} or more right of ${result.rounds} counts (probability by guessing at most 5 %).`,
-      `How little a miss proves: someone whose true rate is as given would have reached ${result.need} with this probability. ${power}.`,
+      `How little a miss proves: ${power}.`,
     ];
   },
 
@@ -82,6 +92,7 @@ const trialText = {
       row("probability by guessing", result.chance),
       row("rate, 95 % interval, low", low),
       row("rate, 95 % interval, high", high),
+      ...result.power.map(([rate, chance]) => row(`probability of reaching it at a true rate of ${rate}`, chance)),
       "",
       row("round", "hidden", "answer", "right"),
       ...result.log.map(({ round, hidden, answer }) =>

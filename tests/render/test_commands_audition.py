@@ -41,6 +41,33 @@ def test_page_pictures_and_joined_wav_stand_beside_the_takes(riff, tmp_path, cap
     assert {path: path.read_bytes() for path in out.iterdir()} == before
 
 
+def test_the_page_has_the_name_asked_for_and_stays_unless_asked(riff, tmp_path, capsys):
+    out = tmp_path / "named"
+    options = ["--no-joined", "--pictures", "none", "--page", "mine.html"]
+    assert main(["audition", riff, *ASK, "-o", str(out), *options]) == 0
+    page = out / "mine.html"
+    assert not (out / "listen.html").exists()
+    said = capsys.readouterr().out
+    assert f"open {page} in a browser ({page.stat().st_size / 1e6:.1f} MB)" in said
+    for take in out.glob("*.wav"):
+        take.unlink()
+        take.with_suffix(".json").unlink()
+    page.write_text("mine")
+    # The page alone is in the way: nothing is rendered.
+    assert main(["audition", riff, *ASK, "-o", str(out), *options]) == 2
+    assert "mine.html: exists already" in capsys.readouterr().err
+    assert [path.name for path in out.iterdir()] == ["mine.html"]
+    assert page.read_text() == "mine"
+
+
+@pytest.mark.parametrize("name", ["../out.html", "page.txt", "a/b.html", "a\\b.html", ""])
+def test_a_page_that_would_not_lie_beside_its_takes_is_refused(riff, tmp_path, capsys, name):
+    out = tmp_path / "x"
+    assert main(["audition", riff, *ASK, "-o", str(out), "--page", name]) == 2
+    assert "--page" in capsys.readouterr().err
+    assert not out.exists()
+
+
 def test_nothing_but_takes_where_nothing_else_is_wanted(riff, tmp_path):
     out = tmp_path / "plain"
     options = ["--no-page", "--no-joined", "--pictures", "none"]

@@ -7,6 +7,7 @@ import time
 import numpy as np
 import pytest
 from scipy import signal, stats
+from sweepset.render.page.data import PagePair
 
 RATE = 48_000
 pytestmark = pytest.mark.browser
@@ -67,15 +68,47 @@ def test_tracks_and_figures_follow_the_take(open_page):
     assert tab.locator("#sweep").is_visible()
 
 
-def test_no_sideways_scrolling_on_a_narrow_screen(open_page):
+def test_two_different_takes_stay_under_comparison(open_page):
+    tab = open_page().tab
+    assert "close 9:00, against dry" in tab.locator("#state").inner_text()
+    tab.keyboard.press("1")
+    assert "dry, against close 9:00" in tab.locator("#state").inner_text()
+    tab.get_by_label("set against dry").click()
+    assert "dry, against close 9:00" in tab.locator("#state").inner_text()
+    assert tab.get_by_label("set against close 9:00").is_checked()
+    tab.get_by_label("set against wide 9:00").check()
+    assert "dry, against wide 9:00" in tab.locator("#state").inner_text()
+
+
+def test_choosing_a_take_does_not_move_the_page(open_page):
+    tab = open_page(width=360).tab
+    tab.evaluate("window.scrollTo(0, 0)")
+    for key in "231":
+        tab.keyboard.press(key)
+        assert tab.evaluate("window.scrollY") == 0
+
+
+def test_moments_outside_the_stretch_held_are_not_offered(make_page, tmp_path, visit, two_tones):
+    pair = PagePair(1, 2, "Plainly different.", (0.2, 1.2, 1.9))
+    seen = visit(make_page(tmp_path, two_tones, excerpt_s=(1.0, 1.5), pairs=[pair]))
+    seen.begin()
+    assert seen.tab.locator("#pair").inner_text() == "Plainly different."
+    assert seen.tab.locator("#moments button").all_inner_texts() == ["1.2 s"]
+
+
+LONG = "a set whose name is a whole sentence and " + "unbroken" * 12
+
+
+def test_no_sideways_scrolling_on_a_narrow_screen(open_page, two_tones):
+    takes = dict(zip(["dry", LONG, "wide 9:00"], two_tones.values(), strict=True))
     for scheme in ("light", "dark"):
-        tab = open_page(width=360, scheme=scheme).tab
+        tab = open_page(width=360, scheme=scheme, takes=takes).tab
         assert tab.evaluate("document.documentElement.scrollWidth") <= 360
         tab.locator("#trial-start").click()
         assert tab.evaluate("document.documentElement.scrollWidth") <= 360
 
 
-RENDER = """async ([texts, rate, frames, moves, loop]) => {
+RENDER = """async ([texts, rate, frames, moves, loop, throughSilence]) => {
   const { graph } = window.sweepset;
   const context = new OfflineAudioContext(1, frames, rate);
   const buffers = texts.map((samples) => {
@@ -87,15 +120,15 @@ RENDER = """async ([texts, rate, frames, moves, loop]) => {
   if (loop) buffers.forEach((buffer) => graph.blendSeam(buffer, loop));
   const voices = graph.wire(context, buffers, context.destination);
   voices[0].gain.gain.value = 1;
-  for (const [voice, when] of moves) graph.choose(voices, voice, when);
+  for (const [voice, when] of moves) graph.choose(voices, voice, when, throughSilence);
   graph.start(voices, 0, 0, loop);
   return Array.from((await context.startRendering()).getChannelData(0));
 }"""
 
 
-def rendered(tab, takes, frames, moves, loop=None):
+def rendered(tab, takes, frames, moves, loop=None, through_silence=False):
     texts = [np.asarray(take, np.float32).tolist() for take in takes]
-    return np.array(tab.evaluate(RENDER, [texts, RATE, frames, moves, loop]))
+    return np.array(tab.evaluate(RENDER, [texts, RATE, frames, moves, loop, through_silence]))
 
 
 def test_a_switch_is_sample_exact_and_gains_sum_to_one(open_page, two_tones):
@@ -228,6 +261,18 @@ def test_blind_trial_from_start_to_saved_result(open_page, tmp_path):
     shown = set()
     for n, bit in enumerate(bits):
         assert f"Round {n + 1} of 10" in tab.locator("#trial-round").inner_text()
+        if n == 1:
+            # An answer before the hidden take is heard, or a key held down, does not count.
+            tab.keyboard.press("f")
+            assert "Round 2 of 10. Hear the hidden one first." in (
+                tab.locator("#trial-round").inner_text()
+            )
+            tab.keyboard.press("3")
+            tab.evaluate(
+                """document.body.dispatchEvent(
+                  new KeyboardEvent("keydown", { key: "f", repeat: true, bubbles: true }))"""
+            )
+            assert tab.locator("#trial-round").inner_text() == "Round 2 of 10."
         tab.keyboard.press("3")
         # Whatever is hidden, the page looks the same but for the round's number.
         body = tab.locator("#bench").evaluate("(bench) => bench.outerHTML")
@@ -240,6 +285,12 @@ def test_blind_trial_from_start_to_saved_result(open_page, tmp_path):
     assert "8 of 10 right" in verdict
     assert "0.0547" in verdict
     assert "well be luck" in verdict
+    # The power of "9 of 10" at a true rate of 0.9, by scipy.
+    power = stats.binom.sf(8, 10, 0.9)
+    details = tab.locator("#trial-details").inner_text()
+    least = stats.binom.sf(8, 10, 0.6)
+    assert f"right 60 % of the time reaches 9 of 10 in {100 * least:.1f} % of trials" in details
+    assert f"at 90 % in {100 * power:.1f} %" in details
     with tab.expect_download() as waiting:
         tab.locator("#trial-save").click()
     waiting.value.save_as(tmp_path / "result.csv")
@@ -248,9 +299,47 @@ def test_blind_trial_from_start_to_saved_result(open_page, tmp_path):
     assert figures["right"] == "8"
     assert float(figures["probability by guessing"]) == pytest.approx(0.0546875)
     assert figures["first take"] == "close 9:00"
+    told = float(figures["probability of reaching it at a true rate of 0.9"])
+    assert told == pytest.approx(power, rel=1e-9)
     log = [row for row in rows if len(row) == 4][1:]
     assert [row[1] for row in log] == [("first", "second")[bit] for bit in bits]
     assert [row[3] for row in log].count("yes") == 8
+
+
+def test_a_trial_by_keyboard_alone_from_the_caution_to_the_saved_result(
+    make_page, tmp_path, visit, two_tones
+):
+    seen = visit(make_page(tmp_path / "p", two_tones))
+    tab = seen.tab
+
+    def tab_to(name):
+        for _ in range(60):
+            if tab.evaluate("document.activeElement.id") == name:
+                return
+            tab.keyboard.press("Tab")
+        raise AssertionError(f"{name} is not reached by Tab")
+
+    tab.locator("#ready:not([disabled])").wait_for()
+    tab_to("ready")
+    tab.keyboard.press("Enter")
+    tab_to("trial-rounds")
+    tab.keyboard.press("Control+a")
+    tab.keyboard.type("6")
+    tab_to("trial-start")
+    tab.keyboard.press("Enter")
+    for n in range(6):
+        tab.locator("#trial-round", has_text=f"Round {n + 1} of 6").wait_for()
+        tab.keyboard.press("123"[n % 3])
+        tab.keyboard.press("3")
+        tab.keyboard.press("fs"[n % 2])
+    tab_to("trial-save")
+    with tab.expect_download() as waiting:
+        tab.keyboard.press("Enter")
+    waiting.value.save_as(tmp_path / "result.csv")
+    rows = list(csv.reader((tmp_path / "result.csv").read_text().splitlines()))
+    log = [row for row in rows if len(row) == 4][1:]
+    assert [row[2] for row in log] == ["first", "second"] * 3
+    assert [row[3] for row in log] == ["yes" if row[1] == row[2] else "no" for row in log]
 
 
 def test_a_trial_given_up_has_no_result_and_hides_nothing_wrongly(open_page):
@@ -285,6 +374,7 @@ def test_hidden_draws_are_even_and_unlike(open_page):
     for _ in range(4):
         tab.locator("#trial-start").click()
         for _ in range(50):
+            tab.keyboard.press("3")
             tab.keyboard.press("f")
         right.append(int(tab.locator("#trial-verdict").inner_text().split()[0]))
         tab.locator("#trial-again").click()
@@ -304,19 +394,98 @@ def test_hostile_names_are_text(make_page, tmp_path, visit, two_tones):
     assert tab.evaluate("window.sweepset.trialText.cell('a,\"b')") == '"a,""b"'
 
 
+def test_a_change_to_the_hidden_take_sounds_alike_whichever_it_is(open_page, two_tones):
+    # From the first take to the hidden one: what is heard is the one take going and the other
+    # coming, with a silence between, under gains that do not depend on which it is.
+    tab = open_page().tab
+    one, two = two_tones["dry"][:24_000], two_tones["wide 9:00"][:24_000]
+    steady = np.full(24_000, 0.5)
+    when, silence, tau = 0.2, 0.03, 0.004
+    moves = [[2, when]]
+    outs = {
+        name: rendered(tab, [one, two, hidden], 24_000, moves, through_silence=True)
+        for name, hidden in (("first", one), ("second", two))
+    }
+    level = rendered(tab, [steady, steady, steady], 24_000, moves, through_silence=True) / 0.5
+    start, turn = round(when * RATE), round((when + silence) * RATE)
+    np.testing.assert_array_equal(outs["first"][:start], outs["second"][:start])
+    assert level[turn - 96 : turn].max() < 1e-3  # -60 dB
+    time_s = np.arange(24_000) / RATE
+    rising = np.where(time_s < when + silence, 0.0, 1.0 - np.exp(-(time_s - when - silence) / tau))
+    falling = np.where(time_s < when, 1.0, np.exp(-np.maximum(time_s - when, 0.0) / tau))
+    for name, hidden in (("first", one), ("second", two)):
+        assert np.abs(outs[name] - falling * one - rising * hidden).max() < 2e-5
+
+
+def test_changes_in_quick_succession_end_on_the_last_one(open_page):
+    tab = open_page().tab
+    takes = [np.full(24_000, value) for value in (0.1, 0.2, 0.3)]
+    moves = [[1, 0.1], [2, 0.11], [0, 0.12], [2, 0.125]]
+    for through_silence in (False, True):
+        out = rendered(tab, takes, 24_000, moves, through_silence=through_silence)
+        assert np.abs(out[round(0.3 * RATE) :] - 0.3).max() < 1e-4
+        assert out.max() < 0.301
+
+
+# Writes down what the player asks of the browser, as only a test may.
+SPY = """
+window.asked = [];
+for (const [type, name] of [[AudioParam, "setTargetAtTime"], [AudioBufferSourceNode, "start"]]) {
+  const real = type.prototype[name];
+  type.prototype[name] = function (...numbers) {
+    window.asked.push([name, ...numbers]);
+    return real.apply(this, numbers);
+  };
+}
+"""
+
+
+def test_the_player_starts_all_together_and_treats_every_hidden_take_alike(open_page):
+    seen = open_page()
+    seen.context.add_init_script(SPY)
+    fixed_draws(seen, [0, 1, 0, 1, 1])
+    tab = seen.tab
+
+    def asked():
+        return tab.evaluate("window.asked.splice(0)")
+
+    tab.locator("#trial-rounds").fill("5")
+    tab.locator("#trial-start").click()
+    asked()
+    rounds = []
+    for number in range(5):
+        tab.keyboard.press("3")
+        tab.locator("#play", has_text="Stop").wait_for()
+        for key in "123":
+            tab.keyboard.press(key)
+        entries = asked()
+        if number:
+            starts = [entry for entry in entries if entry[0] == "start"]
+            assert len(starts) == 3
+            assert all(start == starts[0] for start in starts)
+        # Each target gain and time constant, and whether its gain waits for the silence.
+        rounds.append([(e[1], e[3]) for e in entries if e[0] == "setTargetAtTime"])
+        tab.keyboard.press("f")
+    assert rounds[1] == rounds[2] == rounds[3] == rounds[4]
+    assert (1, 0.004) in rounds[1]
+
+
 @pytest.mark.slow
 def test_eight_takes_of_thirty_seconds_open_in_three_seconds(make_page, tmp_path, visit):
     # Issue's figure; measured from opening the file to takes ready.
     generator = np.random.default_rng(2)
     takes = {f"take {n}": generator.normal(0.0, 0.1, 30 * RATE).clip(-0.9, 0.9) for n in range(8)}
     page = make_page(tmp_path, takes)
-    start = time.perf_counter()
-    seen = visit(page)
-    seen.tab.locator("#ready:not([disabled])").wait_for()
-    took = time.perf_counter() - start
-    print(f"\n{page.stat().st_size / 1e6:.0f} MB ready in {took:.2f} s")
-    # A shared machine may be busy; the figure itself is printed.
-    assert took < 9.0
+    took: list[float] = []
+    # Other programs may hold the machine for a moment: the best of up to five counts.
+    while len(took) < 5 and min(took, default=9.0) >= 3.0:
+        start = time.perf_counter()
+        seen = visit(page)
+        seen.tab.locator("#ready:not([disabled])").wait_for()
+        took.append(time.perf_counter() - start)
+        seen.context.close()
+    print(f"\n{page.stat().st_size / 1e6:.0f} MB ready in {min(took):.2f} s")
+    assert min(took) < 3.0
 
 
 def test_forty_takes_a_short_riff_and_silence(make_page, tmp_path, visit):

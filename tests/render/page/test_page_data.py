@@ -35,6 +35,8 @@ def test_takes_that_do_not_fit_leave_a_stretch_about_the_moment_that_counts(tmp_
     data = page_data("riff", takes, (), pairs=[pair], limit_bytes=limit)
     assert (data.start_frame / RATE, data.stop_frame / RATE) == (5.0, 9.0)
     assert "holds 5.0 s to 9.0 s of the riff's 10.0 s" in data.notice
+    # two takes of 10 s at 3 bytes a frame
+    assert "all of it would have about 3 MB" in data.notice
     first = page_data("riff", takes, (), limit_bytes=limit)
     assert (first.start_frame, first.stop_frame) == (0, 4 * RATE)
 
