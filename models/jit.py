@@ -14,6 +14,7 @@ import os
 import shutil
 import sys
 import tempfile
+import threading
 from collections.abc import Callable
 from contextlib import suppress
 from functools import cache
@@ -31,6 +32,7 @@ numba_config: Any = numba.config
 # trick in the exponential and bit-identical lanes depend on the written order.
 FASTMATH = {"contract"}
 KEPT_CACHES = 4
+_SETTING = threading.Lock()
 
 
 def kernel_sources() -> list[Path]:
@@ -102,14 +104,17 @@ def kernel(**options: Any) -> Callable[[F], F]:
         folder = cache_folder()
         if folder is None:
             return cast(F, numba.njit(**settings)(function))
-        before = numba_config.CACHE_DIR
-        numba_config.CACHE_DIR = str(folder)
-        try:
-            dispatcher = numba.njit(cache=True, **settings)(function)
-        except (RuntimeError, OSError):
-            return cast(F, numba.njit(**settings)(function))
-        finally:
-            numba_config.CACHE_DIR = before
+        # One setting for the whole process: two threads changing it at once would let a
+        # cache stray into the current folder.
+        with _SETTING:
+            before = numba_config.CACHE_DIR
+            numba_config.CACHE_DIR = str(folder)
+            try:
+                dispatcher = numba.njit(cache=True, **settings)(function)
+            except (RuntimeError, OSError):
+                return cast(F, numba.njit(**settings)(function))
+            finally:
+                numba_config.CACHE_DIR = before
         _forgive_full_disk(dispatcher)
         return cast(F, dispatcher)
 

@@ -98,3 +98,25 @@ def test_only_the_newest_caches_are_kept(tmp_path):
     kept = {path.name for path in base.iterdir()}
     assert len(kept) == jit.KEPT_CACHES
     assert Path(folder).name in kept
+
+
+def test_threads_building_loops_at_once_all_cache_in_the_one_folder(monkeypatch):
+    import time
+    from concurrent.futures import ThreadPoolExecutor
+
+    import numba
+    from sweepset.models.jit import cache_folder, kernel, numba_config
+
+    real, places = numba.njit, []
+
+    def slow(**options):
+        # Long enough for another thread to change the setting, were it let.
+        time.sleep(0.002)
+        places.append(numba_config.CACHE_DIR)
+        return real(**options)
+
+    monkeypatch.setattr(numba, "njit", slow)
+    with ThreadPoolExecutor(8) as pool:
+        list(pool.map(lambda number: kernel()(lambda x: x + number), range(40)))
+    assert set(places) == {str(cache_folder())}
+    assert numba_config.CACHE_DIR == ""
